@@ -1,0 +1,39 @@
+"""Settings that every test runs under.
+
+Rules of this file:
+
+- Nothing here may make a test pass that would fail for a user: only what varies from desk to desk
+  (terminal width, colours, plot windows, random seeds) is pinned.
+"""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+
+import pytest
+from hypothesis import settings
+
+ROOT = Path(__file__).resolve().parent.parent
+
+# No deadline: two busy cores stretch single examples without anything being wrong. A fixed seed
+# where a machine decides; at a desk every run tries new examples.
+settings.register_profile("desk", deadline=None)
+settings.register_profile("machine", deadline=None, derandomize=True, print_blob=True)
+settings.load_profile("machine" if os.environ.get("CI") else "desk")
+
+
+@pytest.fixture(scope="session")
+def root() -> Path:
+    """Top folder of the checkout."""
+    return ROOT
+
+
+@pytest.fixture(autouse=True)
+def plain_surroundings(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Same terminal for all: wide, without colours; plots never open a window."""
+    monkeypatch.setenv("MPLBACKEND", "Agg")
+    monkeypatch.setenv("COLUMNS", "120")
+    monkeypatch.setenv("NO_COLOR", "1")
+    for name in ("FORCE_COLOR", "CLICOLOR_FORCE", "PYTHONWARNINGS"):
+        monkeypatch.delenv(name, raising=False)
