@@ -163,10 +163,10 @@ def say(text):
 def main(extras):
     """Bring `.venv` up to date; return the exit status."""
     try:
-        require_version(sys.version_info)
         venv = ROOT / ".venv"
         if not ready(ROOT, venv, extras):
             if not usable(venv):
+                require_version(sys.version_info)
                 create(venv)
             install(ROOT, venv, extras)
     except SetUpError as error:

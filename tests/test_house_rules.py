@@ -73,7 +73,6 @@ OWNERS: dict[str, tuple[str, ...]] = {
     "subprocess": ("rehearse",),
     "matplotlib": ("report",),
     "typer": ("cli",),
-    "click": ("cli",),
     "rich": ("cli",),
 }
 """Who may import a library that has an owner; the longest name that fits counts."""
@@ -697,7 +696,7 @@ def test_every_library_is_declared_with_a_lower_bound() -> None:
         declared[match[1].lower()] = match[2]
     distributions = importlib.metadata.packages_distributions()
     # Brought along by a library that is declared, and part of its face.
-    part_of = {"click": "typer", "markupsafe": "jinja2"}
+    part_of = {"markupsafe": "jinja2"}
     used = {
         imported.split(".")[0]
         for path in MODULES
