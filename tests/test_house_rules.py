@@ -10,6 +10,7 @@ Rules of this file:
 from __future__ import annotations
 
 import ast
+import builtins
 import doctest
 import importlib
 import importlib.metadata
@@ -304,6 +305,15 @@ def documented_parameters(
             yield at(source, node, f"{title}: parameter {name} has no [unit]")
 
 
+def names_of(error: str) -> set[str]:
+    """Names under which a Raises section may announce an error: its own, or a built-in parent's."""
+    name = error.split(".")[-1]
+    kind = getattr(builtins, name, None)
+    if not isinstance(kind, type):
+        return {name}
+    return {parent.__name__ for parent in kind.__mro__} - {"object", "BaseException", "Exception"}
+
+
 def function_docs(
     source: Source, node: ast.FunctionDef | ast.AsyncFunctionDef, *, title: str, method: bool
 ) -> Iterator[str]:
@@ -313,7 +323,7 @@ def function_docs(
         yield at(source, node, f"{title}: no docstring")
         return
     sections = sections_of(doc)
-    if not sections[""] or not re.search(r"[.:?]$", doc.split("\n\n")[0].strip()):
+    if not sections[""] or not re.search(r"[.:?](\s\[[^\]]+\])?$", doc.split("\n\n")[0].strip()):
         yield at(source, node, f"{title}: the summary is no sentence")
     if source.name in SPEAKERS:
         return
@@ -340,7 +350,7 @@ def function_docs(
     elif raised:
         told = "\n".join(sections["Raises"])
         for name in sorted(raised):
-            if name.endswith("Error") and name.split(".")[-1] not in told:
+            if name.endswith("Error") and not names_of(name) & set(re.findall(r"\w+", told)):
                 yield at(source, node, f"{title}: Raises does not name {name}")
     sourced = {"Notes", "References"} & set(sections) or re.search(r"^Source: \S", doc, re.M)
     if not method and not sourced:
