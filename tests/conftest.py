@@ -9,6 +9,7 @@ Rules of this file:
 from __future__ import annotations
 
 import os
+from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
@@ -29,11 +30,13 @@ def root() -> Path:
     return ROOT
 
 
-@pytest.fixture(autouse=True)
-def plain_surroundings(monkeypatch: pytest.MonkeyPatch) -> None:
+@pytest.fixture(scope="session", autouse=True)
+def plain_surroundings() -> Iterator[None]:
     """Same terminal for all: wide, without colours; plots never open a window."""
-    monkeypatch.setenv("MPLBACKEND", "Agg")
-    monkeypatch.setenv("COLUMNS", "120")
-    monkeypatch.setenv("NO_COLOR", "1")
-    for name in ("FORCE_COLOR", "CLICOLOR_FORCE", "PYTHONWARNINGS"):
-        monkeypatch.delenv(name, raising=False)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setenv("MPLBACKEND", "Agg")
+        patch.setenv("COLUMNS", "120")
+        patch.setenv("NO_COLOR", "1")
+        for name in ("FORCE_COLOR", "CLICOLOR_FORCE", "PYTHONWARNINGS"):
+            patch.delenv(name, raising=False)
+        yield

@@ -314,6 +314,26 @@ def names_of(error: str) -> set[str]:
     return {parent.__name__ for parent in kind.__mro__} - {"object", "BaseException", "Exception"}
 
 
+def raised_by(node: ast.AST, caught: frozenset[str] = frozenset()) -> Iterator[str]:
+    """Names of the errors that a block raises and does not itself catch."""
+    if isinstance(node, ast.Raise) and node.exc is not None:
+        name = ast.unparse(node.exc).split("(")[0]
+        if not (names_of(name) | {"Exception", "BaseException"}) & caught:
+            yield name
+    inner = caught
+    if isinstance(node, ast.Try):
+        inner = caught.union(
+            *(re.findall(r"\w+", ast.unparse(handler.type)) for handler in node.handlers)
+            if all(handler.type for handler in node.handlers)
+            else []
+        )
+    for name, value in ast.iter_fields(node):
+        children = value if isinstance(value, list) else [value]
+        for child in children:
+            if isinstance(child, ast.AST):
+                yield from raised_by(child, inner if name == "body" else caught)
+
+
 def function_docs(
     source: Source, node: ast.FunctionDef | ast.AsyncFunctionDef, *, title: str, method: bool
 ) -> Iterator[str]:
@@ -340,11 +360,7 @@ def function_docs(
     if returns not in {"None", "NoReturn", "Never"} and not is_property:
         if not {"Returns", "Yields"} & set(sections):
             yield at(source, node, f"{title}: no Returns section")
-    raised = {
-        ast.unparse(inner.exc).split("(")[0]
-        for inner in ast.walk(node)
-        if isinstance(inner, ast.Raise) and inner.exc is not None
-    } - {"AssertionError"}
+    raised = set(raised_by(node)) - {"AssertionError"}
     if raised and "Raises" not in sections:
         yield at(source, node, f"{title}: raises {', '.join(sorted(raised))}, no Raises section")
     elif raised:
@@ -441,6 +457,11 @@ def area(side: float) -> float:
     return side * side
 '''
 
+CAUGHT = GOOD.replace(
+    "    return side * side",
+    "    try:\n        raise KeyError(side)\n    except LookupError:\n        return side * side",
+)
+
 OFFENCES: tuple[tuple[Rule, str, str, str], ...] = (
     (floors, "stranger", "", "not in the table of floors"),
     (floors, "plant", "from plant2.sampled import hold", "imports sampled"),
@@ -480,6 +501,7 @@ OFFENCES: tuple[tuple[Rule, str, str, str], ...] = (
     (documented, "plant", GOOD.replace("Raises\n    ------", ""), "no Raises section"),
     (documented, "plant", GOOD.replace("    ValueError\n", "    KeyError\n"), "does not name"),
     (documented, "plant", GOOD.replace("Notes\n    -----", ""), "no Notes"),
+    (documented, "plant", CAUGHT.replace("KeyError", "OSError"), "Raises does not name OSError"),
     (
         documented,
         "plant",
@@ -502,14 +524,15 @@ def test_rule_finds_the_planted_offence(rule: Rule, module: str, text: str, expe
     assert all(complaint.startswith(f"{label}:") for complaint in complaints)
 
 
-def test_rules_are_content_with_good_code() -> None:
+@pytest.mark.parametrize("code", [GOOD, CAUGHT], ids=["good", "caught"])
+def test_rules_are_content_with_good_code(code: str) -> None:
     text = (
         '"""Areas."""\n'
         "from typing import TYPE_CHECKING\n"
         "import numpy as np\n"
         "from plant2 import __version__\n"
         "from plant2.errors import OutOfRangeError\n"
-        "if TYPE_CHECKING:\n    import control\n" + GOOD
+        "if TYPE_CHECKING:\n    import control\n" + code
     )
     source = Source(name="plant", label="plant2/plant.py", tree=ast.parse(text))
     assert [complaint for rule in RULES for complaint in rule(source)] == []
