@@ -15,13 +15,16 @@ Rules of this file:
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
+from fractions import Fraction
 from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
 from plant2.errors import OutOfRangeError
+from plant2.solve import bisect
 
 if TYPE_CHECKING:
     import control
@@ -30,9 +33,11 @@ if TYPE_CHECKING:
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
+Pair = tuple[float, float]
 
 MOTIONS = ("linear", "rotary")
 DRIVES = ("current", "voltage")
+_EPS = float(np.finfo(np.float64).eps)
 
 
 # --------------------------------------------------------------------------------------------------
@@ -133,7 +138,7 @@ class Plant:
         elif self.drive == "voltage":
             raise OutOfRangeError(
                 "resistance_ohm",
-                math.nan,
+                None,
                 "ohm",
                 "must be given with voltage drive",
                 "measure the coil, or choose current drive",
@@ -636,6 +641,1382 @@ def control_state_space(plant: Plant) -> control.StateSpace:
 
 
 # --------------------------------------------------------------------------------------------------
+# Figures of mass, damping and stiffness alone
+
+
+def natural_frequency_rad_per_s(plant: Plant) -> float:
+    """Natural frequency of mass and spring; 0 for a free mass.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant.
+
+    Returns
+    -------
+    float
+        ``sqrt(k/m)``. [rad/s]
+
+    Notes
+    -----
+    Textbook definition (Thomson, *Theory of Vibration with Applications*, ch. 2).
+
+    Examples
+    --------
+    >>> natural_frequency_rad_per_s(Plant(mass=2.0, stiffness=50.0))
+    5.0
+    """
+    return math.sqrt(plant.stiffness / plant.mass)
+
+
+def critical_damping(plant: Plant) -> float:
+    """Damping at which mass and spring just stop swinging; 0 for a free mass.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant.
+
+    Returns
+    -------
+    float
+        ``2 sqrt(m k)``. [N s/m or N m s/rad]
+
+    Notes
+    -----
+    Textbook definition (Thomson, *Theory of Vibration with Applications*, ch. 2).
+
+    Examples
+    --------
+    >>> critical_damping(Plant(mass=2.0, stiffness=50.0))
+    20.0
+    """
+    return 2.0 * math.sqrt(plant.mass * plant.stiffness)
+
+
+def damping_ratio(plant: Plant) -> float:
+    """Damping over critical damping.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, with a spring.
+
+    Returns
+    -------
+    float
+        ``b/(2 sqrt(m k))``. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant is a free mass.
+
+    Notes
+    -----
+    Textbook definition (Thomson, *Theory of Vibration with Applications*, ch. 2).
+
+    Examples
+    --------
+    >>> damping_ratio(Plant(mass=2.0, damping=5.0, stiffness=50.0))
+    0.25
+    """
+    _need_spring(plant, "a damping ratio")
+    return plant.damping / critical_damping(plant)
+
+
+def regime(plant: Plant) -> str:
+    """Kind of free motion, in words.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant.
+
+    Returns
+    -------
+    str
+        "undamped", "underdamped", "critically damped", "overdamped", "free mass" or
+        "free mass with damping". [-]
+
+    Notes
+    -----
+    From the sign of ``b^2 - 4 m k``, taken exactly; a plant nearer to critical than decimal numbers
+    can be written in doubles counts as critical. Own derivation.
+
+    Examples
+    --------
+    >>> regime(Plant(mass=1.0, damping=2.0, stiffness=1.0))
+    'critically damped'
+    """
+    if plant.stiffness == 0.0:
+        return "free mass with damping" if plant.damping > 0.0 else "free mass"
+    if plant.damping == 0.0:
+        return "undamped"
+    discriminant = _discriminant(plant)
+    if abs(discriminant) <= 4 * _EPS * Fraction(plant.damping) ** 2:
+        return "critically damped"
+    return "underdamped" if discriminant < 0 else "overdamped"
+
+
+def damped_frequency_rad_per_s(plant: Plant) -> float:
+    """Frequency at which the damped plant swings; 0 when it does not swing.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant.
+
+    Returns
+    -------
+    float
+        ``sqrt(k/m - (b/2m)^2)`` or 0. [rad/s]
+
+    Notes
+    -----
+    ``sqrt(4 m k - b^2)/(2 m)``, the difference taken exactly; own derivation.
+
+    Examples
+    --------
+    >>> damped_frequency_rad_per_s(Plant(mass=1.0, damping=6.0, stiffness=25.0))
+    4.0
+    """
+    discriminant = _discriminant(plant)
+    return float(_root(-discriminant) / (2 * Fraction(plant.mass))) if discriminant < 0 else 0.0
+
+
+def decay_time_s(plant: Plant) -> float:
+    """Time in which the slowest part of free motion falls to 1/e; infinite without damping.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, with a spring.
+
+    Returns
+    -------
+    float
+        ``2 m/b`` where it swings, else the longer of the two time constants. [s]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant is a free mass.
+
+    Notes
+    -----
+    ``(b + sqrt(b^2 - 4 m k))/(2 k)`` for the overdamped plant; own derivation.
+
+    Examples
+    --------
+    >>> decay_time_s(Plant(mass=1.0, damping=6.0, stiffness=25.0)) * 3.0
+    1.0
+    """
+    _need_spring(plant, "a decay time")
+    if plant.damping == 0.0:
+        return math.inf
+    discriminant = _discriminant(plant)
+    if discriminant < 0:
+        return 2.0 * plant.mass / plant.damping
+    return float((Fraction(plant.damping) + _root(discriminant)) / (2 * Fraction(plant.stiffness)))
+
+
+def quality_factor(plant: Plant) -> float:
+    """Quality factor of the resonance; infinite without damping.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, with a spring.
+
+    Returns
+    -------
+    float
+        ``1/(2 damping ratio)``. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant is a free mass.
+
+    Notes
+    -----
+    Textbook definition (Thomson, *Theory of Vibration with Applications*, ch. 3).
+
+    Examples
+    --------
+    >>> quality_factor(Plant(mass=2.0, damping=5.0, stiffness=50.0))
+    2.0
+    """
+    ratio = damping_ratio(plant)
+    return 0.5 / ratio if ratio > 0.0 else math.inf
+
+
+def log_decrement(plant: Plant) -> float:
+    """Natural logarithm of the ratio of successive amplitudes of the ringing plant.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, underdamped.
+
+    Returns
+    -------
+    float
+        ``2 pi z/sqrt(1 - z^2)``. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant does not swing.
+
+    Notes
+    -----
+    ``2 pi b/sqrt(4 m k - b^2)`` (Thomson, *Theory of Vibration with Applications*, sec. 2.7).
+
+    Examples
+    --------
+    >>> log_decrement(Plant(mass=1.0, damping=6.0, stiffness=25.0)) / math.pi
+    1.5
+    """
+    _need_swing(plant)
+    return 2.0 * math.pi * float(Fraction(plant.damping) / _root(-_discriminant(plant)))
+
+
+def log_decrement_of_amplitudes(*, first: float, last: float, cycles: float) -> float:
+    """Log decrement from two amplitudes some cycles apart.
+
+    Parameters
+    ----------
+    first, last : float
+        Amplitudes, above 0. [m or rad]
+    cycles : float
+        Cycles between them, above 0; halves are allowed. [-]
+
+    Returns
+    -------
+    float
+        ``ln(first/last)/cycles``. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If an argument is not finite and above 0.
+
+    Notes
+    -----
+    Only for viscous damping: under friction the result changes from cycle to cycle. Textbook
+    definition (Thomson, *Theory of Vibration with Applications*, sec. 2.7).
+
+    Examples
+    --------
+    >>> log_decrement_of_amplitudes(first=math.e, last=1.0, cycles=0.5)
+    2.0
+    """
+    _check_above_zero("first", first, "")
+    _check_above_zero("last", last, "")
+    _check_above_zero("cycles", cycles, "")
+    return math.log(first / last) / cycles
+
+
+def damping_ratio_of_log_decrement(decrement: float) -> float:
+    """Damping ratio from the log decrement.
+
+    Parameters
+    ----------
+    decrement : float
+        Log decrement, at least 0. [-]
+
+    Returns
+    -------
+    float
+        ``d/sqrt(4 pi^2 + d^2)``. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the decrement is negative or not finite.
+
+    Notes
+    -----
+    The inverse of `log_decrement` (Rao, *Mechanical Vibrations*, ch. 2, from memory).
+
+    Examples
+    --------
+    >>> round(damping_ratio_of_log_decrement(2.0 * math.pi) ** 2, 15)
+    0.5
+    """
+    _check_not_negative("decrement", decrement, "")
+    return decrement / math.hypot(2.0 * math.pi, decrement)
+
+
+def plant_of_ringing(*, mass: float, damped_period_s: float, decrement: float) -> Plant:
+    """Plant of known mass from how it rings.
+
+    Parameters
+    ----------
+    mass : float
+        Mass or inertia, above 0. [kg or kg m^2]
+    damped_period_s : float
+        Time from one maximum to the next, above 0. [s]
+    decrement : float
+        Log decrement, at least 0. [-]
+
+    Returns
+    -------
+    Plant
+        With damping and stiffness that ring this way.
+
+    Raises
+    ------
+    OutOfRangeError
+        If an argument lies outside the range given above.
+
+    Notes
+    -----
+    ``b = 2 m a``, ``k = m (wd^2 + a^2)`` with ``a = decrement/period``; own derivation.
+
+    Examples
+    --------
+    >>> stage = plant_of_ringing(mass=2.0, damped_period_s=0.5, decrement=1.0)
+    >>> stage.damping
+    8.0
+    """
+    _check_above_zero("damped_period_s", damped_period_s, "s")
+    _check_not_negative("decrement", decrement, "")
+    rate = decrement / damped_period_s
+    frequency = 2.0 * math.pi / damped_period_s
+    return Plant(mass=mass, damping=2.0 * mass * rate, stiffness=mass * (frequency**2 + rate**2))
+
+
+def plant_of_poles(*, mass: float, pole1: complex, pole2: complex) -> Plant:
+    """Plant of known mass from its two poles.
+
+    Parameters
+    ----------
+    mass : float
+        Mass or inertia, above 0. [kg or kg m^2]
+    pole1, pole2 : complex
+        Two real poles or a conjugate pair, none in the right half plane. [rad/s]
+
+    Returns
+    -------
+    Plant
+        With damping and stiffness that have these poles.
+
+    Raises
+    ------
+    OutOfRangeError
+        If the poles are no pair of a real plant, or one lies in the right half plane.
+
+    Notes
+    -----
+    ``b = -m (s1 + s2)``, ``k = m s1 s2``; Vieta's rule.
+
+    Examples
+    --------
+    >>> stage = plant_of_poles(mass=1.0, pole1=-3.0 + 4.0j, pole2=-3.0 - 4.0j)
+    >>> stage.damping, stage.stiffness
+    (6.0, 25.0)
+    """
+    total, product = pole1 + pole2, pole1 * pole2
+    if total.imag != 0.0 or abs(product.imag) > 8.0 * _EPS * abs(product):
+        raise OutOfRangeError(
+            "pole2.imag", pole2.imag, "rad/s", "must mirror pole1", "give a conjugate pair"
+        )
+    for name, pole in (("pole1.real", pole1), ("pole2.real", pole2)):
+        if not pole.real <= 0.0:
+            raise OutOfRangeError(
+                name, pole.real, "rad/s", "must be at most 0", "give poles of a passive plant"
+            )
+    return Plant(mass=mass, damping=-mass * total.real, stiffness=mass * product.real)
+
+
+# --------------------------------------------------------------------------------------------------
+# Free motion
+
+
+def free_motion(
+    plant: Plant, position0: float, velocity0: float, time_s: float | Real
+) -> tuple[Real, Real]:
+    """Free motion of mass, damper and spring about their position of rest.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant; drive, modes, friction, stops and constant force are left out.
+    position0 : float
+        Position at time 0, from the position of rest. [m or rad]
+    velocity0 : float
+        Velocity at time 0. [m/s or rad/s]
+    time_s : float or array of float, any shape
+        Times, finite, at least 0. [s]
+
+    Returns
+    -------
+    tuple of two arrays of float, the shape of time_s
+        Position and velocity. [m, m/s or rad, rad/s]
+
+    Raises
+    ------
+    OutOfRangeError
+        If a time is negative or not finite, or a start value is not finite.
+
+    Notes
+    -----
+    One pair of forms on either side of ``b^2 = 4 m k``, smooth across it and without cancellation.
+    With ``a = b/2m`` and S the response to a unit velocity: swinging, ``S = exp(-a t)
+    sin(wd t)/wd``; else, with the slow root ``-s`` and the distance ``g`` of the roots,
+    ``S = exp(-s t) (1 - exp(-g t))/g``. The roots come from ``b^2 - 4 m k`` in exact fractions, and
+    ``rate x time`` is carried to twice the digits, so that long times stay exact. Own derivation.
+
+    Examples
+    --------
+    >>> position, velocity = free_motion(Plant(mass=1.0), 1.0, 2.0, 3.0)
+    >>> float(position), float(velocity)
+    (7.0, 2.0)
+    """
+    _check_finite("position0", position0, _length_unit(plant))
+    _check_finite("velocity0", velocity0, f"{_length_unit(plant)}/s")
+    t = np.asarray(time_s, dtype=np.float64)
+    bad = ~(np.isfinite(t) & (t >= 0.0))
+    if bad.any():
+        raise OutOfRangeError(
+            "time_s", float(t[bad][0]), "s", "must be finite and at least 0", "leave it out"
+        )
+    m, b, k = Fraction(plant.mass), Fraction(plant.damping), Fraction(plant.stiffness)
+    discriminant = _discriminant(plant)
+    acceleration = float(k / m)
+    if discriminant < 0:
+        decay = _exponential(b / (2 * m), t)
+        frequency = _root(-discriminant) / (2 * m)
+        phase, rest = _product(frequency, t)
+        sine, cosine = np.sin(phase), np.cos(phase)
+        sine, cosine = sine + rest * cosine, cosine - rest * sine
+        kick = decay * (sine / float(frequency))
+        cosine = decay * cosine
+        drift = float(b / (2 * m)) * kick
+        return (
+            np.asarray(position0 * (cosine + drift) + velocity0 * kick),
+            np.asarray(velocity0 * (cosine - drift) - position0 * acceleration * kick),
+        )
+    root = _root(discriminant)
+    slow = 2 * k / (b + root) if k > 0 else Fraction(0)
+    decay = _exponential(slow, t)
+    gap = float(root / m) * t
+    # (1 - exp(-g t))/(g t), which is 1 where the roots meet.
+    mean = np.divide(-np.expm1(-gap), gap, out=np.ones_like(gap), where=gap > 0.0)
+    kick = decay * t * mean
+    fast = decay * _exponential(root / m, t)
+    drift = float(slow) * kick
+    return (
+        np.asarray(position0 * (decay + drift) + velocity0 * kick),
+        np.asarray(velocity0 * (fast - drift) - position0 * acceleration * kick),
+    )
+
+
+def free_amplitude_and_phase(
+    plant: Plant, position0: float, velocity0: float
+) -> tuple[float, float]:
+    """Amplitude and phase of the ringing plant.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, underdamped.
+    position0 : float
+        Position at time 0, from the position of rest. [m or rad]
+    velocity0 : float
+        Velocity at time 0. [m/s or rad/s]
+
+    Returns
+    -------
+    tuple of two floats
+        C and psi of ``x = C exp(-a t) sin(wd t + psi)``. [m or rad, rad]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant does not swing.
+
+    Notes
+    -----
+    ``C sin psi = x0``, ``C cos psi = (v0 + a x0)/wd`` (Meriam and Kraige, *Dynamics*, ch. 8).
+
+    Examples
+    --------
+    >>> free_amplitude_and_phase(Plant(mass=1.0, damping=6.0, stiffness=25.0), 0.0, 8.0)
+    (2.0, 0.0)
+    """
+    _need_swing(plant)
+    rate = 0.5 * plant.damping / plant.mass
+    across = (velocity0 + rate * position0) / damped_frequency_rad_per_s(plant)
+    return math.hypot(position0, across), math.atan2(position0, across)
+
+
+def peak_of_kick(plant: Plant, velocity0: float) -> float:
+    """Farthest position of a plant that starts from rest position with a velocity.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, with a spring.
+    velocity0 : float
+        Velocity at time 0. [m/s or rad/s]
+
+    Returns
+    -------
+    float
+        Position of the first and largest peak. [m or rad]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant is a free mass.
+
+    Notes
+    -----
+    ``v0/(w0 exp(phi/tan phi))`` with ``cos phi`` the damping ratio; own derivation.
+
+    Examples
+    --------
+    >>> peak_of_kick(Plant(mass=2.0, stiffness=50.0), 10.0)
+    2.0
+    """
+    _need_spring(plant, "a farthest position")
+    frequency = natural_frequency_rad_per_s(plant)
+    return velocity0 / (frequency * steepest_rise_ratio(damping_ratio(plant)))
+
+
+def amplitude_loss_per_cycle(plant: Plant) -> float:
+    """How much the amplitude of free motion falls per cycle by Coulomb friction alone.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, with a spring.
+
+    Returns
+    -------
+    float
+        ``4 friction/k``. [m or rad]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant is a free mass.
+
+    Notes
+    -----
+    Without viscous damping (Rao, *Mechanical Vibrations*, ch. 2, from memory).
+
+    Examples
+    --------
+    >>> amplitude_loss_per_cycle(Plant(mass=1.0, stiffness=8.0, friction=0.5))
+    0.25
+    """
+    _need_spring(plant, "cycles")
+    return 4.0 * plant.friction / plant.stiffness
+
+
+def friction_of_amplitude_loss(plant: Plant, loss_per_cycle: float) -> float:
+    """Coulomb friction from how much the amplitude falls per cycle.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, with a spring.
+    loss_per_cycle : float
+        Fall of the amplitude per cycle, at least 0. [m or rad]
+
+    Returns
+    -------
+    float
+        Friction level. [N or N m]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant is a free mass, or the loss is negative or not finite.
+
+    Notes
+    -----
+    The inverse of `amplitude_loss_per_cycle`.
+
+    Examples
+    --------
+    >>> friction_of_amplitude_loss(Plant(mass=1.0, stiffness=8.0), 0.25)
+    0.5
+    """
+    _need_spring(plant, "cycles")
+    _check_not_negative("loss_per_cycle", loss_per_cycle, _length_unit(plant))
+    return 0.25 * plant.stiffness * loss_per_cycle
+
+
+# --------------------------------------------------------------------------------------------------
+# Forced motion
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ResonancePeak:
+    """Where a driven plant moves most.
+
+    Parameters
+    ----------
+    frequency_rad_per_s : float
+        Frequency of the largest amplitude. [rad/s]
+    magnification : float
+        That amplitude over the one at rest; infinite without damping. [-]
+
+    Notes
+    -----
+    Textbook definition.
+    """
+
+    frequency_rad_per_s: float
+    magnification: float
+
+
+def forced_amplitude(plant: Plant, *, force: float, omega_rad_per_s: float) -> float:
+    """Amplitude of mass, damper and spring under a steady sinusoidal force.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant; drive and modes are left out.
+    force : float
+        Amplitude of the force. [N or N m]
+    omega_rad_per_s : float
+        Angular frequency, finite, at least 0. [rad/s]
+
+    Returns
+    -------
+    float
+        Amplitude of the position. [m or rad]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the frequency is negative or not finite, or the amplitude is infinite there.
+
+    Notes
+    -----
+    ``F/hypot(k - m w^2, b w)`` (Thomson, *Theory of Vibration with Applications*, ch. 3).
+
+    Examples
+    --------
+    >>> stage = Plant(mass=1.0, damping=2.0, stiffness=4.0)
+    >>> forced_amplitude(stage, force=8.0, omega_rad_per_s=2.0)
+    2.0
+    """
+    _check_not_negative("omega_rad_per_s", omega_rad_per_s, "rad/s")
+    real, imaginary = _dynamic_stiffness(plant, omega_rad_per_s)
+    return abs(force) / math.hypot(real, imaginary)
+
+
+def forced_phase_rad(plant: Plant, *, omega_rad_per_s: float) -> float:
+    """Angle by which position lags a steady sinusoidal force.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant; drive and modes are left out.
+    omega_rad_per_s : float
+        Angular frequency, finite, at least 0. [rad/s]
+
+    Returns
+    -------
+    float
+        The lag, from 0 to pi. [rad]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the frequency is negative or not finite, or the amplitude is infinite there.
+
+    Notes
+    -----
+    ``atan2(b w, k - m w^2)`` (Thomson, *Theory of Vibration with Applications*, ch. 3).
+
+    Examples
+    --------
+    >>> stage = Plant(mass=1.0, damping=2.0, stiffness=4.0)
+    >>> forced_phase_rad(stage, omega_rad_per_s=2.0) / math.pi
+    0.5
+    """
+    _check_not_negative("omega_rad_per_s", omega_rad_per_s, "rad/s")
+    real, imaginary = _dynamic_stiffness(plant, omega_rad_per_s)
+    return math.atan2(imaginary, real)
+
+
+def resonance_peak(plant: Plant) -> ResonancePeak | None:
+    """Where the driven plant moves most, if that is not at rest.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant.
+
+    Returns
+    -------
+    ResonancePeak or None
+        None where the amplitude only falls with frequency: damping ratio of 1/sqrt 2 or more, or no
+        spring.
+
+    Notes
+    -----
+    ``w0 sqrt(1 - 2 z^2)`` and ``1/(2 z sqrt(1 - z^2))`` (Thomson, *Theory of Vibration with
+    Applications*, ch. 3).
+
+    Examples
+    --------
+    >>> resonance_peak(Plant(mass=1.0, damping=2.0, stiffness=1.0)) is None
+    True
+    """
+    squares = 2 * Fraction(plant.mass) * Fraction(plant.stiffness) - Fraction(plant.damping) ** 2
+    if squares <= 0:
+        return None
+    frequency = math.sqrt(float(squares / (2 * Fraction(plant.mass) ** 2)))
+    if plant.damping == 0.0:
+        return ResonancePeak(frequency_rad_per_s=frequency, magnification=math.inf)
+    swing = float(Fraction(plant.damping) * _root(-_discriminant(plant)))
+    return ResonancePeak(
+        frequency_rad_per_s=frequency, magnification=2.0 * plant.mass * plant.stiffness / swing
+    )
+
+
+def half_power_frequencies_rad_per_s(plant: Plant) -> tuple[float, float]:
+    """Frequencies either side of the resonance where its amplitude has fallen to 1/sqrt 2.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, with a damping ratio above 0 and below sin(pi/8) = 0.3827.
+
+    Returns
+    -------
+    tuple of two floats
+        The lower and the upper one. [rad/s]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant is a free mass, undamped, or damped so much that the lower one does not exist.
+
+    Notes
+    -----
+    ``(w/w0)^2 = 1 - 2 z^2 -+ 2 z sqrt(1 - z^2)``, so that their distance is near ``2 z w0`` for
+    small z; own derivation.
+
+    Examples
+    --------
+    >>> low, high = half_power_frequencies_rad_per_s(Plant(mass=1.0, damping=0.01, stiffness=1.0))
+    >>> round(high - low, 6)
+    0.01
+    """
+    _need_spring(plant, "a resonance")
+    z = damping_ratio(plant)
+    limit = math.sin(math.pi / 8.0)
+    if not 0.0 < z < limit:
+        raise OutOfRangeError(
+            "damping_ratio",
+            z,
+            "",
+            "must be above 0 and below 0.3827",
+            "fit the whole response instead",
+        )
+    middle, aside = 1.0 - 2.0 * z * z, 2.0 * z * math.sqrt((1.0 - z) * (1.0 + z))
+    frequency = natural_frequency_rad_per_s(plant)
+    return frequency * math.sqrt(middle - aside), frequency * math.sqrt(middle + aside)
+
+
+def damping_ratio_of_magnification(*, frequency_ratio: float, magnification: float) -> float:
+    """Damping ratio from the amplitude at one frequency.
+
+    Parameters
+    ----------
+    frequency_ratio : float
+        Frequency over natural frequency, above 0. [-]
+    magnification : float
+        Amplitude there over the one at rest, above 0. [-]
+
+    Returns
+    -------
+    float
+        The damping ratio. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If an argument is not above 0, or no damping gives this amplitude.
+
+    Notes
+    -----
+    ``sqrt(1/M^2 - (1 - r^2)^2)/(2 r)``, the textbook magnification solved for z.
+
+    Examples
+    --------
+    >>> damping_ratio_of_magnification(frequency_ratio=1.0, magnification=5.0)
+    0.1
+    """
+    _check_above_zero("frequency_ratio", frequency_ratio, "")
+    _check_above_zero("magnification", magnification, "")
+    rest = (1.0 / magnification) ** 2 - (1.0 - frequency_ratio**2) ** 2
+    if rest < 0.0:
+        raise OutOfRangeError(
+            "magnification",
+            magnification,
+            "",
+            "is more than the undamped plant shows at this frequency",
+            "check the natural frequency",
+        )
+    return math.sqrt(rest) / (2.0 * frequency_ratio)
+
+
+def ramp_lag_s(plant: Plant) -> float:
+    """Time by which position trails a force that grows steadily.
+
+    Parameters
+    ----------
+    plant : Plant
+        The plant, with a spring.
+
+    Returns
+    -------
+    float
+        ``b/k``, which is ``2 z/w0``. [s]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the plant is a free mass.
+
+    Notes
+    -----
+    The particular solution of a ramp is the same ramp, later by b/k; own derivation.
+
+    Examples
+    --------
+    >>> ramp_lag_s(Plant(mass=1.0, damping=2.0, stiffness=4.0))
+    0.5
+    """
+    _need_spring(plant, "a lag")
+    return plant.damping / plant.stiffness
+
+
+# --------------------------------------------------------------------------------------------------
+# The standard second-order step: w0^2/(s^2 + 2 z w0 s + w0^2)
+
+
+def overshoot(damping_ratio: float) -> float:
+    """Overshoot of the standard step over its final value.
+
+    Parameters
+    ----------
+    damping_ratio : float
+        Damping ratio, at least 0. [-]
+
+    Returns
+    -------
+    float
+        A fraction; 0 from a damping ratio of 1 on. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the damping ratio is negative or not finite.
+
+    Notes
+    -----
+    ``exp(-pi z/sqrt(1 - z^2))`` (Ogata, *Modern Control Engineering*, ch. 5, from memory).
+
+    Examples
+    --------
+    >>> round(overshoot(0.5), 6)
+    0.163034
+    """
+    _check_not_negative("damping_ratio", damping_ratio, "")
+    if damping_ratio >= 1.0:
+        return 0.0
+    return math.exp(-math.pi * damping_ratio / _swing(damping_ratio))
+
+
+def damping_ratio_of_overshoot(fraction: float) -> float:
+    """Damping ratio whose standard step overshoots this much.
+
+    Parameters
+    ----------
+    fraction : float
+        Overshoot over the final value, above 0, at most 1. [-]
+
+    Returns
+    -------
+    float
+        The damping ratio. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the overshoot lies outside the range given above.
+
+    Notes
+    -----
+    ``-ln p/sqrt(pi^2 + ln^2 p)``, the inverse of `overshoot`.
+
+    Examples
+    --------
+    >>> round(damping_ratio_of_overshoot(overshoot(0.3)), 12)
+    0.3
+    """
+    if not 0.0 < fraction <= 1.0:
+        raise OutOfRangeError(
+            "fraction", fraction, "", "must be above 0 and at most 1", "give the overshoot / 1"
+        )
+    log = -math.log(fraction)
+    return log / math.hypot(math.pi, log)
+
+
+def fastest_damping_ratio(band: float) -> float:
+    """Damping ratio whose standard step settles soonest into a band.
+
+    Parameters
+    ----------
+    band : float
+        Half-width over the final value, above 0, below 1. [-]
+
+    Returns
+    -------
+    float
+        The damping ratio. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the band lies outside the range given above.
+
+    Notes
+    -----
+    The overshoot then just fills the band. It is a cliff: with a little less damping the step
+    leaves the band again at its first peak. Textbook result (the curve with the jump is in Ogata,
+    *Modern Control Engineering*, ch. 5, from memory).
+
+    Examples
+    --------
+    >>> round(fastest_damping_ratio(0.02), 6)
+    0.779703
+    """
+    _check_band(band)
+    return damping_ratio_of_overshoot(band)
+
+
+def rise_time_ratio(damping_ratio: float) -> float:
+    """10 % to 90 % rise time of the standard step times the natural frequency.
+
+    Parameters
+    ----------
+    damping_ratio : float
+        Damping ratio, at least 0. [-]
+
+    Returns
+    -------
+    float
+        Rise time x natural frequency. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the damping ratio is negative or not finite.
+
+    Notes
+    -----
+    First crossings, solved on the exact step; own derivation.
+
+    Examples
+    --------
+    >>> round(rise_time_ratio(0.5), 9)
+    1.637572947
+    """
+    error = _step_error(damping_ratio)
+    high = math.pi / _swing(damping_ratio) if damping_ratio < 1.0 else 1.0
+    while error(high) > 0.1:
+        high *= 2.0
+    return _falling_to(error, 0.1, 0.0, high) - _falling_to(error, 0.9, 0.0, high)
+
+
+def steepest_rise_ratio(damping_ratio: float) -> float:
+    """Rise time by the steepest slope of the standard step, times the natural frequency.
+
+    Parameters
+    ----------
+    damping_ratio : float
+        Damping ratio, at least 0. [-]
+
+    Returns
+    -------
+    float
+        Natural frequency over the largest slope of the unit step. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the damping ratio is negative or not finite.
+
+    Notes
+    -----
+    ``exp(phi/tan phi)``, ``cos phi = z``; with cosh and tanh above 1 (Astrom and Murray, *Feedback
+    Systems*, ch. 6, from memory; above 1 own derivation).
+
+    Examples
+    --------
+    >>> steepest_rise_ratio(1.0) == math.e
+    True
+    """
+    _check_not_negative("damping_ratio", damping_ratio, "")
+    if damping_ratio == 1.0:
+        return math.e
+    side = _swing(damping_ratio)
+    if damping_ratio < 1.0:
+        return math.exp(math.atan2(side, damping_ratio) * damping_ratio / side)
+    return math.exp(math.asinh(side) * damping_ratio / side)
+
+
+def settling_ratio(damping_ratio: float, band: float) -> float:
+    """Exact settling time of the standard step times the natural frequency.
+
+    Parameters
+    ----------
+    damping_ratio : float
+        Damping ratio, above 0. [-]
+    band : float
+        Half-width over the final value, above 0, below 1. [-]
+
+    Returns
+    -------
+    float
+        Time of the last entry into the band x natural frequency. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If an argument lies outside the range given above.
+
+    Notes
+    -----
+    The last peak outside the band is known in closed form, the entry after it is solved for; a peak
+    within 1e-12 of the band counts as inside it. Own derivation.
+
+    Examples
+    --------
+    >>> round(settling_ratio(0.5, 0.02), 9)
+    8.076348974
+    """
+    _check_above_zero("damping_ratio", damping_ratio, "")
+    _check_band(band)
+    error = _step_error(damping_ratio)
+    if damping_ratio >= 1.0:
+        high = 1.0
+        while error(high) > band:
+            high *= 2.0
+        return _falling_to(error, band, 0.0, high)
+    swing = _swing(damping_ratio)
+    per_peak = math.pi * damping_ratio / swing
+    peak = max(0, math.ceil((-math.log(band) - 1e-12) / per_peak) - 1)
+    start, sign = peak * math.pi / swing, -1.0 if peak % 2 else 1.0
+    return _falling_to(lambda x: sign * error(x), band, start, start + math.pi / swing)
+
+
+def bandwidth_ratio(damping_ratio: float) -> float:
+    """-3 dB bandwidth of the standard second-order response over the natural frequency.
+
+    Parameters
+    ----------
+    damping_ratio : float
+        Damping ratio, at least 0. [-]
+
+    Returns
+    -------
+    float
+        Frequency at which the response has fallen to 1/sqrt 2, over the natural frequency. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the damping ratio is negative or not finite.
+
+    Notes
+    -----
+    ``sqrt(q + sqrt(q^2 + 1))``, ``q = 1 - 2 z^2`` (Dorf and Bishop, *Modern Control Systems*,
+    ch. 8, from memory).
+
+    Examples
+    --------
+    >>> round(bandwidth_ratio(0.5), 4)
+    1.272
+    """
+    _check_not_negative("damping_ratio", damping_ratio, "")
+    q = 1.0 - 2.0 * damping_ratio * damping_ratio
+    root = math.hypot(q, 1.0)
+    return math.sqrt(q + root) if q >= 0.0 else 1.0 / math.sqrt(root - q)
+
+
+def phase_margin_rad(damping_ratio: float) -> float:
+    """Phase margin of w0^2/(s (s + 2 z w0)), the loop whose closed form is the standard one.
+
+    Parameters
+    ----------
+    damping_ratio : float
+        Damping ratio, at least 0. [-]
+
+    Returns
+    -------
+    float
+        The phase margin. [rad]
+
+    Raises
+    ------
+    OutOfRangeError
+        If the damping ratio is negative or not finite.
+
+    Notes
+    -----
+    ``atan(2 z/sqrt(sqrt(1 + 4 z^4) - 2 z^2))`` (Nise, *Control Systems Engineering*, eq. 10.73,
+    from memory), with the difference turned into a sum.
+
+    Examples
+    --------
+    >>> round(math.degrees(phase_margin_rad(0.5)), 3)
+    51.827
+    """
+    _check_not_negative("damping_ratio", damping_ratio, "")
+    square = 2.0 * damping_ratio * damping_ratio
+    return math.atan(2.0 * damping_ratio * math.sqrt(math.hypot(1.0, square) + square))
+
+
+# --------------------------------------------------------------------------------------------------
+# Coils
+
+
+def conductor_length_m(*, turns: float, mean_diameter_m: float) -> float:
+    """Length of wire in a round coil.
+
+    Parameters
+    ----------
+    turns : float
+        Number of turns, above 0. [-]
+    mean_diameter_m : float
+        Mean diameter, above 0. [m]
+
+    Returns
+    -------
+    float
+        ``pi x diameter x turns``. [m]
+
+    Raises
+    ------
+    OutOfRangeError
+        If an argument is not finite and above 0.
+
+    Notes
+    -----
+    Geometry.
+
+    Examples
+    --------
+    >>> round(conductor_length_m(turns=100.0, mean_diameter_m=0.01), 6)
+    3.141593
+    """
+    _check_above_zero("turns", turns, "")
+    _check_above_zero("mean_diameter_m", mean_diameter_m, "m")
+    return math.pi * mean_diameter_m * turns
+
+
+def coil_force_constant(*, flux_density_t: float, length_m: float) -> float:
+    """Force per current of a coil whose wire lies across a magnetic field.
+
+    Parameters
+    ----------
+    flux_density_t : float
+        Flux density, above 0. [T]
+    length_m : float
+        Length of wire in the field, above 0. [m]
+
+    Returns
+    -------
+    float
+        ``B l``; the back-EMF constant has the same number. [N/A]
+
+    Raises
+    ------
+    OutOfRangeError
+        If an argument is not finite and above 0.
+
+    Notes
+    -----
+    Force on a straight conductor; textbook physics.
+
+    Examples
+    --------
+    >>> coil_force_constant(flux_density_t=0.5, length_m=20.0)
+    10.0
+    """
+    _check_above_zero("flux_density_t", flux_density_t, "T")
+    _check_above_zero("length_m", length_m, "m")
+    return flux_density_t * length_m
+
+
+# --------------------------------------------------------------------------------------------------
+# The chain of units
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Link:
+    """One conversion between two quantities of the loop.
+
+    Parameters
+    ----------
+    from_unit, to_unit : str
+        Names of the two units. [-]
+    factor : float
+        Change of the second quantity per change of the first, with its sign. [to per from]
+    text : str
+        The whole conversion in words, offset included. [-]
+
+    Notes
+    -----
+    Own definition.
+    """
+
+    from_unit: str
+    to_unit: str
+    factor: float
+    text: str
+
+
+def unit_chain(loop: Loop) -> tuple[Link, ...]:
+    """Follow the units once around: position, count, code, current or voltage, force.
+
+    Parameters
+    ----------
+    loop : Loop
+        A loop as read from its file.
+
+    Returns
+    -------
+    tuple of Link
+        In loop order. The link from count to code is that of a gain of 1 N/m (N m/rad, V/m or
+        V/rad), so the product of all factors is that gain in newton per metre at standstill.
+
+    Raises
+    ------
+    OutOfRangeError
+        If voltage drive lacks a resistance.
+
+    Notes
+    -----
+    ``count = zero + polarity x position/step`` and ``value = polarity x (code - zero) x step``; own
+    definitions.
+    """
+    sensor, actuator = loop.sensor, loop.actuator
+    plant = plant_of(loop)
+    length, force = _length_unit(plant), _force_unit(plant)
+    volts = actuator.drive == "voltage"
+    value, gain_unit = ("V", f"V/{length}") if volts else ("A", f"{force}/{length}")
+    per_count = sensor.polarity * sensor.step
+    per_code = actuator.polarity * actuator.step
+    effort_per_code = per_code if volts else per_code * actuator.force_constant
+    code_per_count = per_count / effort_per_code
+    force_per_value = actuator.force_constant
+    force_text = f"{force} = {actuator.force_constant:.6g} x A"
+    if volts:
+        force_per_value = actuator.force_constant / _resistance_ohm(plant)
+        force_text = f"{force} = {force_per_value:.6g} x V, at standstill"
+    return (
+        Link(
+            from_unit=length,
+            to_unit="count",
+            factor=1.0 / per_count,
+            text=f"count = {_offset(sensor.zero_count)}{1.0 / per_count:.6g} x {length}",
+        ),
+        Link(
+            from_unit="count",
+            to_unit="code",
+            factor=code_per_count,
+            text=f"a gain of 1 {gain_unit} is {code_per_count:.6g} code per count",
+        ),
+        Link(
+            from_unit="code",
+            to_unit=value,
+            factor=per_code,
+            text=f"{value} = {per_code:.6g} x {_shifted('code', actuator.zero_code)}",
+        ),
+        Link(from_unit=value, to_unit=force, factor=force_per_value, text=force_text),
+    )
+
+
+def round_trip(loop: Loop) -> float:
+    """Follow the units along two paths and tell how far they disagree.
+
+    Parameters
+    ----------
+    loop : Loop
+        A loop as read from its file.
+
+    Returns
+    -------
+    float
+        Largest relative disagreement of a link or of the whole chain; rounding only, below 1e-12,
+        when everything is in order. [-]
+
+    Raises
+    ------
+    OutOfRangeError
+        If voltage drive lacks a resistance.
+
+    Notes
+    -----
+    One path multiplies the factors of `unit_chain`. The other moves an actual position and an
+    actual effort through the loop file's own numbers (full scale, bits, zero, polarity) in exact
+    fractions, with offsets, and takes differences. Own definition.
+    """
+    sensor, actuator = loop.sensor, loop.actuator
+    plant = plant_of(loop)
+    chain = unit_chain(loop)
+    volts = actuator.drive == "voltage"
+    kf = Fraction(actuator.force_constant)
+    code_step = Fraction(actuator.full_scale) / (1 << (actuator.bits - 1))
+
+    def count_at(position: Fraction) -> Fraction:
+        return sensor.zero_count + sensor.polarity * position / Fraction(sensor.step)
+
+    def code_for(effort: Fraction) -> Fraction:
+        value = effort if volts else effort / kf
+        return actuator.zero_code + actuator.polarity * value / code_step
+
+    def value_at(code: Fraction) -> Fraction:
+        return actuator.polarity * (code - actuator.zero_code) * code_step
+
+    def force_at(value: Fraction) -> Fraction:
+        return kf * value / Fraction(_resistance_ohm(plant)) if volts else kf * value
+
+    start, end = Fraction(0), Fraction(loop.mechanics.travel) / 3
+    # A gain of 1: the effort has the number of the position.
+    stages = [
+        (start, end),
+        (count_at(start), count_at(end)),
+        (code_for(start), code_for(end)),
+        (value_at(code_for(start)), value_at(code_for(end))),
+        (force_at(value_at(code_for(start))), force_at(value_at(code_for(end)))),
+    ]
+    moves = [last - first for first, last in stages]
+    worst = Fraction(0)
+    product = Fraction(1)
+    for link, before, after in zip(chain, moves[:-1], moves[1:], strict=True):
+        product *= Fraction(link.factor)
+        worst = max(worst, abs(Fraction(link.factor) * before / after - 1))
+    return float(max(worst, abs(product * moves[0] / moves[-1] - 1)))
+
+
+# --------------------------------------------------------------------------------------------------
 # Inside
 
 
@@ -701,4 +2082,108 @@ def _check_frequencies(omega: Real, good: NDArray[np.bool_], rule: str) -> None:
             "rad/s",
             rule,
             "leave the point out, or give the plant a damper or a spring",
+        )
+
+
+def _discriminant(plant: Plant) -> Fraction:
+    """``b^2 - 4 m k``, exactly."""
+    damping = Fraction(plant.damping)
+    return damping * damping - 4 * Fraction(plant.mass) * Fraction(plant.stiffness)
+
+
+def _root(square: Fraction) -> Fraction:
+    """Square root of a fraction to about 32 digits: a double and one step of Newton's."""
+    guess = Fraction(math.sqrt(square))
+    return guess + (square - guess * guess) / (2 * guess) if guess > 0 else guess
+
+
+def _product(rate: Fraction, t: Real) -> tuple[Real, Real]:
+    """Rate x time as a double and the rest that it leaves."""
+    high = float(rate)
+    low = float(rate - Fraction(high))
+    product = high * t
+    # Dekker's exact product: both factors cut into halves whose products have no rounding.
+    high1, low1 = _halves(np.asarray(high))
+    high2, low2 = _halves(t)
+    rest = ((high1 * high2 - product) + high1 * low2 + low1 * high2) + low1 * low2
+    return product, rest + low * t
+
+
+def _halves(x: Real) -> tuple[Real, Real]:
+    big = 134217729.0 * x
+    high = big - (big - x)
+    return high, x - high
+
+
+def _exponential(rate: Fraction, t: Real) -> Real:
+    """``exp(-rate t)``, right to the last digits however long the time."""
+    product, rest = _product(rate, t)
+    return np.asarray(np.exp(-product) * (1.0 - rest))
+
+
+def _dynamic_stiffness(plant: Plant, omega_rad_per_s: float) -> Pair:
+    real = plant.stiffness - plant.mass * omega_rad_per_s**2
+    imaginary = plant.damping * omega_rad_per_s
+    if real == 0.0 and imaginary == 0.0:
+        raise OutOfRangeError(
+            "omega_rad_per_s",
+            omega_rad_per_s,
+            "rad/s",
+            "the amplitude is infinite there",
+            "leave the point out, or give the plant a damper or a spring",
+        )
+    return real, imaginary
+
+
+def _swing(damping_ratio: float) -> float:
+    """``sqrt|1 - z^2|`` without cancellation near 1."""
+    return math.sqrt(abs((1.0 - damping_ratio) * (1.0 + damping_ratio)))
+
+
+def _step_error(damping_ratio: float) -> Callable[[float], float]:
+    """One minus the standard unit step, of time x natural frequency."""
+    _check_not_negative("damping_ratio", damping_ratio, "")
+    standard = Plant(mass=1.0, damping=2.0 * damping_ratio, stiffness=1.0)
+    return lambda time: float(free_motion(standard, 1.0, 0.0, time)[0])
+
+
+def _falling_to(function: Callable[[float], float], level: float, low: float, high: float) -> float:
+    """Where a falling function meets a level, to the last digit."""
+    return bisect(lambda x: function(x) - level, low, high, tolerance=0.0)
+
+
+def _offset(zero: int) -> str:
+    return f"{zero} + " if zero else ""
+
+
+def _shifted(name: str, zero: int) -> str:
+    return f"({name} - {zero})" if zero else name
+
+
+def _need_spring(plant: Plant, what: str) -> None:
+    if plant.stiffness == 0.0:
+        raise OutOfRangeError(
+            "stiffness",
+            0.0,
+            f"{_force_unit(plant)}/{_length_unit(plant)}",
+            f"a free mass has not {what}",
+            "give the plant a spring",
+        )
+
+
+def _need_swing(plant: Plant) -> None:
+    if _discriminant(plant) >= 0:
+        raise OutOfRangeError(
+            "damping",
+            plant.damping,
+            f"{_force_unit(plant)} s/{_length_unit(plant)}",
+            "must be below critical damping: the plant does not swing",
+            "give it less damping or a stiffer spring",
+        )
+
+
+def _check_band(band: float) -> None:
+    if not 0.0 < band < 1.0:
+        raise OutOfRangeError(
+            "band", band, "", "must be above 0 and below 1", "give a fraction, 0.02 for 2 %"
         )

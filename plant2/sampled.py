@@ -59,9 +59,9 @@ def propagate(space: StateSpace, dt_s: float | Real) -> tuple[Real, Real, Real]:
     -----
     ``P = sum (A h)^j/(j+1)!`` by Horner's scheme with ``|A h| <= 1/4``, ``X = A h P`` and
     ``G = h P B``; then doubling, ``X <- 2 X + X^2`` and ``G <- 2 G + X G``, in which the identity
-    never appears. States are scaled by powers of two before. Van Loan, IEEE Trans. Automatic Control 23 (1978),
-    for the integral beside the exponential (from memory); the form without the identity is an own
-    derivation.
+    never appears. States are scaled by powers of two before. Van Loan, IEEE Trans. Automatic
+    Control 23 (1978), for the integral beside the exponential (from memory); the form without the
+    identity is an own derivation.
 
     Examples
     --------
