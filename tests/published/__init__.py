@@ -1,0 +1,1 @@
+"""One case per published source: what it prints, and what a public function here returns."""
