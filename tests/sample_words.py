@@ -7,6 +7,7 @@ loops are. Ranges are filled in by interval arithmetic, and `verify_ranges` judg
 
 from collections.abc import Mapping
 from dataclasses import replace
+from fractions import Fraction
 
 from plant2.equations import (
     StateWord,
@@ -519,3 +520,113 @@ def valve_spool() -> WordController:
 def all_samples() -> tuple[WordController, ...]:
     """Every stored controller."""
     return (focus_stage(), tilt_mirror(), valve_spool())
+
+
+class FractionController:
+    """The same list on real numbers: no word, no shift, only values, units and one rounding.
+
+    The reference for integer arithmetic. Signals are exact fractions in counts and codes; a word
+    is its value, a lift is nothing, rounding is floor(x 2^n + 1/2) / 2^n, ties upward.
+    """
+
+    def __init__(self, controller: WordController) -> None:
+        self.controller = controller
+        self.frac_bits = {e.name: e.frac_bits for e in controller.update}
+        self.sum_frac_bits: dict[str, int] = {}
+        for e in controller.update:
+            for name in (e.held, e.rest):
+                if name is not None:
+                    self.sum_frac_bits[name] = e.sum_frac_bits
+        self.past: dict[tuple[str, int], Fraction] = {}
+        self.kept: dict[str, Fraction] = {}
+        self.sums: dict[str, Fraction] = {}
+        self.before: dict[str, Fraction] = {}
+
+    def load(self, state: Mapping[str, int]) -> None:
+        """Take the words of a state struct."""
+        self.past, self.kept = {}, {}
+        for s in self.controller.state:
+            if s.signal is None:
+                self.kept[s.name] = Fraction(state[s.name], 1 << self.sum_frac_bits[s.name])
+            else:
+                value = Fraction(state[s.name], 1 << self.frac_bits[s.signal])
+                self.past[s.signal, max(s.lag, 1)] = value
+
+    def state(self) -> dict[str, int]:
+        """The words of the state struct; every one is an integer."""
+        words = {}
+        for s in self.controller.state:
+            if s.signal is None:
+                value = self.kept[s.name] * (1 << self.sum_frac_bits[s.name])
+            else:
+                value = self.past[s.signal, max(s.lag, 1)] * (1 << self.frac_bits[s.signal])
+            assert value.denominator == 1
+            words[s.name] = int(value)
+        return words
+
+    def _pass(
+        self, equations: tuple[WordEquation, ...], inputs: Mapping[str, int]
+    ) -> dict[str, Fraction]:
+        value = {name: Fraction(v) for name, v in inputs.items()}
+        self.sums, self.before = {}, {}
+        rests = {}
+        for e in equations:
+            total = Fraction(e.constant, 1 << e.sum_frac_bits)
+            for name in (e.held, e.rest):
+                total += self.kept[name] if name is not None else 0
+            for t in e.terms:
+                read = value[t.signal] if t.lag == 0 else self.past[t.signal, t.lag]
+                if t.word is not None:
+                    total += Fraction(t.word, 1 << t.word_frac_bits) * read
+                else:
+                    total += t.sign * Fraction(1, 1 << t.word_frac_bits) * read
+            scale = 1 << e.frac_bits
+            rounded = Fraction((total * scale + Fraction(1, 2)).__floor__(), scale)
+            if e.rest is not None:
+                rests[e.rest] = total - rounded
+            self.sums[e.name], self.before[e.name] = total, rounded
+            if e.limit is not None:
+                low, high = (Fraction(x, scale) for x in e.limit)
+                rounded = low if rounded < low else high if rounded > high else rounded
+            value[e.name] = rounded
+        self.kept.update(rests)
+        return value
+
+    def reset(self, position: int, output: int) -> None:
+        """As the emitted function."""
+        value = self._pass(self.controller.reset, {"position": position, "output": output})
+        start = {
+            s.name: Fraction(0) if s.after_reset is None else value[s.after_reset]
+            for s in self.controller.state
+        }
+        self.kept = {s.name: start[s.name] for s in self.controller.state if s.signal is None}
+        self.past = {
+            (s.signal, max(s.lag, 1)): start[s.name]
+            for s in self.controller.state
+            if s.signal is not None
+        }
+
+    def update(self, reference: int, position: int, added: int = 0) -> int:
+        """As the emitted function."""
+        value = self._pass(
+            self.controller.update,
+            {"reference": reference, "position": position, "added": added},
+        )
+        self.past = {
+            (name, lag): value[name] if lag == 1 else self.past[name, lag - 1]
+            for name, lag in self.past
+        }
+        assert value[self.controller.output].denominator == 1
+        return int(value[self.controller.output])
+
+    def resting_output(self, position: int) -> int:
+        """As the emitted function."""
+        kept = dict(self.kept)
+        value = self._pass(self.controller.resting, {"position": position})
+        self.kept = kept
+        return int(value[self.controller.resting[-1].name])
+
+    def limited(self) -> int:
+        """As the emitted function."""
+        excess = self.past[self.controller.excess, 1]
+        return (excess > 0) - (excess < 0)
