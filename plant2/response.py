@@ -226,6 +226,11 @@ def trajectory_of_samples(
     Trajectory
         Nodes at the sampling instants and, where the delay has a fraction, at the updates between.
 
+    Raises
+    ------
+    OutOfRangeError
+        If the number of outputs does not fit that of the states.
+
     Notes
     -----
     From kT to kT + fT the older output acts, then the next one, see `SampledPlant`.
@@ -890,10 +895,11 @@ def _fine(trajectory: Trajectory) -> Trajectory:
     first = np.nonzero(number == 0)[0]
     states[first] = trajectory.states[:-1]
     states[-1] = trajectory.states[-1]
-    for round_number in range(1, int(counts.max())):
-        at = np.nonzero(number == round_number)[0]
-        chosen = piece[at]
-        states[at] = _after(trajectory, chosen, states[at - 1], steps[chosen])
+    inner = np.nonzero(number)[0]
+    chosen = piece[inner]
+    states[inner] = _after(
+        trajectory, chosen, trajectory.states[chosen], number[inner] * steps[chosen]
+    )
     return replace(
         trajectory,
         times_s=np.append(
