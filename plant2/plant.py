@@ -350,9 +350,9 @@ class StateSpace:
     a : array of float, shape (n, n)
         State matrix, units by the states. [1/s]
     b : array of float, shape (n,)
-        Effect of the controller output.
+        Effect of the controller output. [states/s per output]
     b_force : array of float, shape (n,)
-        Effect of a disturbance force on the main mass.
+        Effect of a disturbance force on the main mass. [states/s per N or N m]
     c_position : array of float, shape (n,)
         True position: main mass plus signed modes. [m or rad]
     c_measured : array of float, shape (n,)
@@ -1920,22 +1920,24 @@ def unit_chain(loop: Loop) -> tuple[Link, ...]:
     plant = plant_of(loop)
     length, force = _length_unit(plant), _force_unit(plant)
     volts = actuator.drive == "voltage"
-    value, gain_unit = ("V", f"V/{length}") if volts else ("A", f"{force}/{length}")
+    value, drive, gain_unit = ("A", "current [A]", f"{force}/{length}")
+    if volts:
+        value, drive, gain_unit = ("V", "voltage [V]", f"V/{length}")
+    angle, push = ("angle", "torque") if plant.motion == "rotary" else ("position", "force")
     per_count = sensor.polarity * sensor.step
     per_code = actuator.polarity * actuator.step
     effort_per_code = per_code if volts else per_code * actuator.force_constant
     code_per_count = per_count / effort_per_code
     force_per_value = actuator.force_constant
-    force_text = f"{force} = {actuator.force_constant:.6g} x A"
     if volts:
         force_per_value = actuator.force_constant / _resistance_ohm(plant)
-        force_text = f"{force} = {force_per_value:.6g} x V, at standstill"
+    force_text = f"{push} [{force}] = {force_per_value:.6g} x {drive}"
     return (
         Link(
             from_unit=length,
             to_unit="count",
             factor=1.0 / per_count,
-            text=f"count = {_offset(sensor.zero_count)}{1.0 / per_count:.6g} x {length}",
+            text=f"count = {_line(sensor.zero_count, 1.0 / per_count)} x {angle} [{length}]",
         ),
         Link(
             from_unit="count",
@@ -1947,9 +1949,14 @@ def unit_chain(loop: Loop) -> tuple[Link, ...]:
             from_unit="code",
             to_unit=value,
             factor=per_code,
-            text=f"{value} = {per_code:.6g} x {_shifted('code', actuator.zero_code)}",
+            text=f"{drive} = {per_code:.6g} x {_shifted('code', actuator.zero_code)}",
         ),
-        Link(from_unit=value, to_unit=force, factor=force_per_value, text=force_text),
+        Link(
+            from_unit=value,
+            to_unit=force,
+            factor=force_per_value,
+            text=f"{force_text}, at standstill" if volts else force_text,
+        ),
     )
 
 
@@ -2152,12 +2159,16 @@ def _falling_to(function: Callable[[float], float], level: float, low: float, hi
     return bisect(lambda x: function(x) - level, low, high, tolerance=0.0)
 
 
-def _offset(zero: int) -> str:
-    return f"{zero} + " if zero else ""
+def _line(zero: int, slope: float) -> str:
+    if zero == 0:
+        return f"{slope:.6g}"
+    return f"{zero} {'-' if slope < 0.0 else '+'} {abs(slope):.6g}"
 
 
 def _shifted(name: str, zero: int) -> str:
-    return f"({name} - {zero})" if zero else name
+    if zero == 0:
+        return name
+    return f"({name} {'-' if zero > 0 else '+'} {abs(zero)})"
 
 
 def _need_spring(plant: Plant, what: str) -> None:

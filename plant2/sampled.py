@@ -160,15 +160,17 @@ class SampledPlant:
     fraction : float
         The rest of the delay over the period, 0 to below 1. [-]
     psi : array of float, shape (n, n)
-        Transition over a period minus the identity.
+        Transition over a period minus the identity. [SI by the states]
     gamma0 : array of float, shape (n,)
         Effect of the output that acts from ``whole_delay`` samples ago.
+        [states per output]
     gamma1 : array of float, shape (n,)
         Effect of the output one sample older; exactly 0 without a fraction.
+        [states per output]
     gamma_force : array of float, shape (n,)
-        Effect of a disturbance force held over the period.
+        Effect of a disturbance force held over the period. [states per N or N m]
     scale : array of float, shape (n,)
-        Powers of two that balance the states; for computing only.
+        Powers of two that balance the states; for computing only. [-]
 
     Notes
     -----
@@ -321,13 +323,13 @@ def plant_response(
         Frequencies as ``z - 1``; for ``z = exp(j w T)`` compute them as ``expm1(j w T)``, see
         `delta_of`. [-]
     row : array of float, shape (n,)
-        What is looked at, such as ``sampled.c_measured``.
+        What is looked at, such as ``sampled.c_measured``. [quantity per state]
 
     Returns
     -------
     tuple of two arrays of complex, the shape of delta
         Row's quantity at the sampling instants per controller output, delay included; and its
-        derivative with respect to z.
+        derivative with respect to z. [quantity per output]
 
     Raises
     ------
@@ -421,12 +423,13 @@ def pulse_transfer(sampled: SampledPlant, row: Real | None = None) -> tuple[Real
     sampled : SampledPlant
         The plant.
     row : array of float, shape (n,), or None
-        What is looked at; None is the true position.
+        What is looked at; None is the true position. [quantity per state]
 
     Returns
     -------
     tuple of two arrays of float
         Numerator and monic denominator; the denominator carries the delay as powers of z.
+        [quantity per output, -]
 
     Notes
     -----
@@ -536,7 +539,7 @@ def tustin_section(
     Parameters
     ----------
     numerator, denominator : tuple of two floats
-        Coefficients of s and of 1.
+        Coefficients of s and of 1. [s, - in a common unit]
     period_s : float
         Sample period, above 0. [s]
     match_rad_per_s : float
@@ -545,7 +548,7 @@ def tustin_section(
     Returns
     -------
     tuple of three floats
-        b0, b1, a1 of ``(b0 + b1/z)/(1 + a1/z)``.
+        b0, b1, a1 of ``(b0 + b1/z)/(1 + a1/z)``. [unit of the section, -]
 
     Raises
     ------
@@ -591,14 +594,14 @@ def matched_section(
     Parameters
     ----------
     numerator, denominator : tuple of two floats
-        Coefficients of s and of 1; none of them 0.
+        Coefficients of s and of 1; none of them 0. [s, - in a common unit]
     period_s : float
         Sample period, above 0. [s]
 
     Returns
     -------
     tuple of three floats
-        b0, b1, a1 of ``(b0 + b1/z)/(1 + a1/z)``.
+        b0, b1, a1 of ``(b0 + b1/z)/(1 + a1/z)``. [unit of the section, -]
 
     Raises
     ------

@@ -13,6 +13,7 @@ import pytest
 
 from plant2 import plant as pl
 from plant2.errors import OutOfRangeError
+from plant2.loopfile import loop_from_text
 from plant2.plant import Plant
 
 P0 = Plant(mass=0.05, damping=0.4, stiffness=200.0)
@@ -637,3 +638,163 @@ def test_argument_out_of_range_is_named(call: Any, name: str) -> None:
     with pytest.raises(OutOfRangeError) as caught:
         call()
     assert caught.value.name == name
+
+
+# -------------------------------------------------------------------------------- loop file, units
+
+LINEAR = """
+[loop]
+name = "stage"
+about = "a stage"
+[plant]
+motion = "linear"
+mass = "50 g"
+damping = "0.4 N*s/m"
+stiffness = "200 N/m"
+travel = "1.5 mm"
+rest_position = "0.1 mm"
+bias_force = "0.2 N"
+friction = "3 mN"
+[[plant.mode]]
+frequency = "1.4 kHz"
+damping_ratio = 0.01
+mass = "0.9 kg"
+sign = -1
+[actuator]
+drive = "current"
+force_constant = "10 N/A"
+full_scale = "4 A"
+bits = 12
+limit = "3 A"
+bandwidth = "8 kHz"
+[sensor]
+full_scale = "2 mm"
+bits = 14
+filter_corner = "20 kHz"
+[processor]
+core = "host"
+sample_rate = "5 kHz"
+delay = "270 us"
+word = 32
+[aim]
+law = "pd"
+damping_ratio = 0.8
+bandwidth = "60 Hz"
+[check]
+step = "0.1 mm"
+"""
+
+ROTARY_VOLTAGE = """
+[loop]
+name = "mirror"
+about = "a mirror"
+[plant]
+motion = "rotary"
+inertia = "0.9 g*cm**2"
+damping = "1.6 uN*m*s/rad"
+stiffness = "18 mN*m/rad"
+[actuator]
+drive = "voltage"
+torque_constant = "5.5 mN*m/A"
+resistance = "4 ohm"
+inductance = "50 uH"
+full_scale = "10 V"
+bits = 14
+coding = "unsigned"
+zero_code = 8190
+polarity = -1
+limit = "9 V"
+[sensor]
+full_scale = "14 deg"
+bits = 16
+coding = "unsigned"
+zero_count = 32770
+polarity = -1
+[processor]
+core = "host"
+sample_rate = "50 kHz"
+delay = "9 us"
+word = 32
+[aim]
+law = "pd"
+damping_ratio = 0.8
+bandwidth = "300 Hz"
+[check]
+step = "0.5 deg"
+"""
+
+
+def test_plant_of_a_loop_file() -> None:
+    plant = pl.plant_of(loop_from_text(LINEAR))
+    assert plant == Plant(
+        mass=0.05,
+        damping=0.4,
+        stiffness=200.0,
+        modes=plant.modes,
+        rest_position=1e-4,
+        bias_force=0.2,
+        friction=0.003,
+        travel=1.5e-3,
+        force_constant=10.0,
+        back_emf=10.0,
+        current_bandwidth_rad_per_s=2.0 * math.pi * 8e3,
+        sensor_corner_rad_per_s=2.0 * math.pi * 20e3,
+    )
+    assert plant.modes[0].sign == -1
+    assert plant.modes[0].frequency_rad_per_s == pytest.approx(2.0 * math.pi * 1400.0, rel=1e-15)
+    assert len(pl.state_space(plant).names) == 6
+
+
+def test_plant_of_a_rotary_loop_file_with_voltage_drive() -> None:
+    plant = pl.plant_of(loop_from_text(ROTARY_VOLTAGE))
+    assert (plant.motion, plant.drive) == ("rotary", "voltage")
+    assert plant.mass == pytest.approx(9e-8, rel=1e-14)
+    assert plant.resistance_ohm == 4.0
+    assert plant.inductance_h == pytest.approx(5e-5, rel=1e-15)
+    assert plant.back_emf == pytest.approx(5.5e-3, rel=1e-15)
+    assert plant.current_bandwidth_rad_per_s is None
+    assert plant.travel == pytest.approx(math.radians(14.0), rel=1e-3)
+
+
+def test_chain_of_units_by_hand() -> None:
+    links = pl.unit_chain(loop_from_text(LINEAR))
+    assert [(link.from_unit, link.to_unit) for link in links] == [
+        ("m", "count"),
+        ("count", "code"),
+        ("code", "A"),
+        ("A", "N"),
+    ]
+    per_m, per_count, per_code, per_a = (link.factor for link in links)
+    assert per_m == pytest.approx(8192.0 / 2e-3, rel=1e-15)
+    assert per_code == pytest.approx(4.0 / 2048.0, rel=1e-15)
+    assert per_a == 10.0
+    # A gain of 1 N/m: counts to metres to newtons to codes.
+    assert per_count == pytest.approx((2e-3 / 8192.0) / (10.0 * 4.0 / 2048.0), rel=1e-14)
+    assert links[0].text == "count = 4.096e+06 x position [m]"
+    assert links[3].text == "force [N] = 10 x current [A]"
+
+
+def test_chain_of_units_with_offsets_and_reversed_converters() -> None:
+    links = pl.unit_chain(loop_from_text(ROTARY_VOLTAGE))
+    assert links[0].factor == pytest.approx(-32768.0 / math.radians(14.0), rel=1e-14)
+    assert links[1].factor > 0.0  # reversed twice
+    assert links[2].factor == pytest.approx(-10.0 / 8192.0, rel=1e-15)
+    assert links[3].factor == pytest.approx(5.5e-3 / 4.0, rel=1e-15)
+    assert links[0].text.startswith("count = 32770 - 134105 x angle [rad]")
+    assert links[2].text.endswith("x (code - 8190)")
+    assert links[3].text == "torque [N m] = 0.001375 x voltage [V], at standstill"
+
+
+@pytest.mark.parametrize("text", [LINEAR, ROTARY_VOLTAGE], ids=["linear", "rotary voltage"])
+def test_round_trip_closes_and_finds_every_wrong_link(
+    text: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    loop = loop_from_text(text)
+    assert pl.round_trip(loop) < 1e-15
+    links = pl.unit_chain(loop)
+    for at, link in enumerate(links):
+        for wrong in (-1.0, 1000.0, 1.0 + 1e-9):
+            bad = replace(link, factor=wrong * link.factor)
+            chain = links[:at] + (bad,) + links[at + 1 :]
+            monkeypatch.setattr(pl, "unit_chain", lambda _, chain=chain: chain)
+            assert pl.round_trip(loop) > 0.9e-9
