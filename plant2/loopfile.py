@@ -524,9 +524,9 @@ def _quantity(
 
     def rule_broken(found: float, kind: Kind) -> str:
         if sign == "above 0" and found <= 0.0:
-            return f"{kind.title} above 0 is wanted"
+            return f"{kind.title} above 0 is needed"
         if sign == "at least 0" and found < 0.0:
-            return f"{kind.title} of at least 0 is wanted"
+            return f"{kind.title} of at least 0 is needed"
         if below and found > parse_quantity(below, kind):
             return f"at most {below} is allowed"
         return ""
@@ -534,7 +534,7 @@ def _quantity(
     def read(value: Any, situation: _Situation) -> float:
         kind = situation.kind(names)
         try:
-            found = parse_quantity(value, kind)
+            found = parse_quantity(value, kind, example=shown(situation).strip('"'))
         except QuantityError as error:
             meant = f'"{error.suggestion}"'
             broken = rule_broken(parse_quantity(error.suggestion, kind), kind)
@@ -630,7 +630,7 @@ def _read_bias_tolerance(value: Any, situation: _Situation) -> tuple[str, float]
     else:
         found, sort = parse_quantity(value, kind), "absolute"
     if found < 0.0:
-        raise _Refusal(f"{kind.title} or a ratio of at least 0 is wanted", '"10 %"')
+        raise _Refusal(f"{kind.title} or a ratio of at least 0 is needed", '"10 %"')
     return sort, found
 
 
@@ -866,7 +866,7 @@ def load_loop(path: str | Path, overrides: Sequence[str] = ()) -> Loop:
     except FileNotFoundError:
         raise LoopFileError((Complaint(allowed="there is no such file"),), source) from None
     except IsADirectoryError:
-        rule = "this is a folder; a loop file is wanted"
+        rule = "this is a folder; a loop file is needed"
         raise LoopFileError((Complaint(allowed=rule),), source) from None
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or str(error)
@@ -924,7 +924,9 @@ def _read(text: str, overrides: tuple[str, ...], source: str) -> Loop:
     for override in overrides:
         complaints += _override(data, override)
     plant, actuator = data.get("plant"), data.get("actuator")
-    gathering = _Gathering(situation=_situation(plant, actuator), complaints=complaints)
+    gathering = _Gathering(
+        situation=_situation(plant, actuator), complaints=complaints, suspected=set()
+    )
     views = {name: _view(gathering, name, data) for name in _TABLES if name not in _LISTED}
     lists = {name: _listed_views(gathering, name, data) for name in _LISTED}
     _complain_about_unknown_tables(gathering, data)
@@ -1061,6 +1063,7 @@ class _Gathering:
 
     situation: _Situation
     complaints: list[Complaint]
+    suspected: set[str]  # paths of keys, and tables, that a misspelt or misplaced one stands for
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -1072,7 +1075,6 @@ class _View:
     place: str
     values: _Table
     refused: set[str]
-    suspected: set[str]
     absent: bool
 
     def name(self, key: str) -> str:
@@ -1080,6 +1082,11 @@ class _View:
         if self.gathering.situation.rotary:
             return _ROTARY_NAMES.get(self.table, {}).get(key, key)
         return key
+
+    def suspected(self, key: str) -> bool:
+        """Whether something else in the file seems to be meant for this key."""
+        meant = self.gathering.suspected
+        return self.table in meant or f"{self.table}.{self.name(key)}" in meant
 
     def given(self, key: str) -> bool:
         """Whether the file has the key, right or wrong."""
@@ -1105,8 +1112,8 @@ class _View:
         if value is not None:
             return value
         example = self.example(key)
-        if key not in self.refused | self.suspected and not self.absent:
-            rule = f"this key is missing{why and ', '}{why}"
+        if key not in self.refused and not self.absent and not self.suspected(key):
+            rule = f"this key is missing ({why})" if why else "this key is missing"
             self.complain(key, rule, f"{self.name(key)} = {example}")
             self.refused.add(key)
         written = tomllib.loads(f"value = {example}")["value"]
@@ -1191,7 +1198,6 @@ def _validated(
         f"\0{key}" if key in outside else inside.get(key, key): value for key, value in raw.items()
     }
     refused: set[str] = set()
-    suspected: set[str] = set()
     try:
         checked = model.model_validate(values, context=situation)
     except ValidationError as errors:
@@ -1201,7 +1207,8 @@ def _validated(
             came = values[key]
             if error["type"] == "extra_forbidden":
                 complaint = _unknown_key(table, place, key.removeprefix("\0"), came, situation)
-                suspected.add(inside.get(complaint.nearest, complaint.nearest))
+                near = complaint.nearest
+                gathering.suspected.add(near if "." in near else f"{table}.{near}")
             else:
                 complaint = _refused_key(place, outside.get(key, key), came, error["ctx"]["error"])
             gathering.complaints.append(complaint)
@@ -1213,7 +1220,6 @@ def _validated(
         place=place,
         values=checked,
         refused=refused,
-        suspected=suspected,
         absent=absent,
     )
 
@@ -1269,7 +1275,7 @@ def _unknown_key(table: str, place: str, key: str, came: Any, situation: _Situat
     if key in other and other[key] in names:
         near = other[key]
         rule = f"with {'rotary' if situation.rotary else 'linear'} motion this key is {near}"
-        line = f"{near} = {_rule_of(_TABLES[table], _inside(table, near)).example(situation)}"
+        line = f"{near} = {_kept_or_example(table, _inside(table, near), came, situation)}"
         return Complaint(
             table=place, key=shown, came=quoted(came), allowed=rule, remedy=line, nearest=near
         )
@@ -1292,6 +1298,15 @@ def _unknown_key(table: str, place: str, key: str, came: Any, situation: _Situat
         remedy=f"{near} = {value}",
         nearest=near,
     )
+
+
+def _kept_or_example(table: str, key: str, came: Any, situation: _Situation) -> str:
+    """The value that came, where the key can take it; else one that it can."""
+    rule = _rule_of(_TABLES[table], key)
+    with contextlib.suppress(ValueError):
+        rule.read(came, situation)
+        return quoted(came)
+    return rule.example(situation)
 
 
 def _inside(table: str, name: str) -> str:
@@ -1326,6 +1341,8 @@ def _complain_about_unknown_tables(gathering: _Gathering, data: dict[str, Any]) 
                 nearest=near,
             )
         gathering.complaints.append(complaint)
+        if near not in data:
+            gathering.suspected.add(near)
 
 
 # --------------------------------------------------------------------------------- table by table
@@ -1344,7 +1361,7 @@ def _assemble(
     )
     actuator = _actuator(views["actuator"], assumptions)
     processor = _processor(views["processor"], views, assumptions)
-    aim = _aim(views["aim"], lists["aim.notch"], processor, views["processor"])
+    aim = _aim(views["aim"], lists["aim.notch"], processor, views["processor"], assumptions)
     step = check.need("step")
     scale_known = views["sensor"].sound("bits", "full_scale") or views["sensor"].sound("resolution")
     unit = _length_unit(loop)
@@ -1373,10 +1390,6 @@ def _assemble(
 
 def _length_unit(view: _View) -> str:
     return "rad" if view.gathering.situation.rotary else "m"
-
-
-def _force_unit(view: _View) -> str:
-    return "N*m" if view.gathering.situation.rotary else "N"
 
 
 def _rad_per_s(frequency_hz: float) -> float:
@@ -1412,7 +1425,7 @@ def _sensor(view: _View, assumptions: list[str]) -> Sensor:
         step = view.need("resolution")
         bits = view.get("bits") or ENCODER_BITS
     else:
-        full_scale = view.need("full_scale", "or resolution for an encoder")
+        full_scale = view.need("full_scale", "or resolution, for an encoder")
         bits = view.need("bits")
         step = math.ldexp(full_scale, 1 - bits)
     zero, low, high = _code_range(view, bits, "zero_count")
@@ -1485,11 +1498,11 @@ def _mass_damping_stiffness(view: _View) -> tuple[float, float, float]:
     """Given as such, or by natural frequency, damping ratio and one of mass and stiffness."""
     mass_name = view.name("mass")
     if not view.given("natural_frequency") and not view.given("damping_ratio"):
-        why = "or natural_frequency and damping_ratio instead"
+        why = "or natural_frequency and damping_ratio"
         mass, damping = view.need("mass"), view.need("damping", why)
         return mass, damping, view.need("stiffness", why)
-    w = _rad_per_s(view.need("natural_frequency", "it goes with damping_ratio"))
-    ratio = view.need("damping_ratio", "it goes with natural_frequency")
+    w = _rad_per_s(view.need("natural_frequency", "damping_ratio needs it"))
+    ratio = view.need("damping_ratio", "natural_frequency needs it")
     if view.given("damping"):
         view.complain("damping", "damping_ratio says the same; keep one of the two")
     if view.given("mass") and view.given("stiffness"):
@@ -1510,7 +1523,7 @@ def _mass_damping_stiffness(view: _View) -> tuple[float, float, float]:
                 remedy = f"natural_frequency = {view.example('natural_frequency')}"
                 view.complain("natural_frequency", rule, remedy)
     else:
-        mass = view.need("mass", "or stiffness; one of them goes with natural_frequency")
+        mass = view.need("mass", "or stiffness; natural_frequency needs one")
         stiffness = mass * w * w
     return mass, 2.0 * ratio * math.sqrt(stiffness * mass), stiffness
 
@@ -1647,10 +1660,26 @@ _PAIR_TARGETS = ("damping_ratio", "bandwidth", "natural_frequency")
 _LEAD_TARGETS = ("crossover", "phase_margin")
 
 
-def _aim(view: _View, notches: list[_View], processor: Processor, timing: _View) -> Aim:
+def _aim(
+    view: _View,
+    notches: list[_View],
+    processor: Processor,
+    timing: _View,
+    assumptions: list[str],
+) -> Aim:
     law = view.need("law")
     if view.sound("law"):
         _complain_about_targets(view, law)
+        # Left in, such keys allow to try another law by changing one line.
+        given_gains = any(view.given(key) for key in _GAINS)
+        idle = [
+            key
+            for key in ("integral_corner", "beta")
+            if view.given(key) and (law != "pid" or (given_gains and key == "integral_corner"))
+        ]
+        if idle:
+            kind = f"law = {law}" + (" and given gains" if law == "pid" else "")
+            assumptions.append(f"without effect with {kind}: {', '.join(idle)}")
     half_rate = processor.sample_rate_hz / 2.0
     if timing.sound("sample_rate"):
         rule = f"this lies below half the sample rate, {format_si(half_rate, 'Hz')}"
@@ -1691,9 +1720,8 @@ def _complain_about_targets(view: _View, law: str) -> None:
     """Targets or gains, not both; those that belong to the law, all of them."""
     gains = [key for key in _GAINS if view.given(key)]
     targets = [key for key in (*_PAIR_TARGETS, *_LEAD_TARGETS) if view.given(key)]
-    for key in ("ki", "integral_corner", "beta"):
-        if view.given(key) and law != "pid":
-            view.complain(key, f"this goes with law = pid; leave it out of law = {law}")
+    if view.given("ki") and law != "pid":
+        view.complain("ki", f"this goes with law = pid; leave it out of law = {law}")
     if gains and targets:
         view.complain(
             gains[0],
@@ -1704,8 +1732,6 @@ def _complain_about_targets(view: _View, law: str) -> None:
         wanted = _GAINS if law == "pid" else _GAINS[:2]
         for key in wanted:
             view.need(key, f"law = {law} with given gains needs {', '.join(wanted)}")
-        if law == "pid" and view.given("integral_corner"):
-            view.complain("integral_corner", "given gains place the poles; leave this out")
         return
     if law == "lead":
         for key in _PAIR_TARGETS:
@@ -1717,11 +1743,11 @@ def _complain_about_targets(view: _View, law: str) -> None:
     for key in _LEAD_TARGETS:
         if view.given(key):
             view.complain(key, f"this goes with law = lead; leave it out of law = {law}")
-    view.need("damping_ratio", f"law = {law} needs it, or gains kp, kd")
+    view.need("damping_ratio", f"law = {law} needs it, or gains kp and kd")
     if view.given("bandwidth") and view.given("natural_frequency"):
         view.complain("natural_frequency", "bandwidth says the same; keep one of the two")
     if not view.given("bandwidth") and not view.given("natural_frequency"):
-        if "natural_frequency" not in view.suspected:
+        if not view.suspected("natural_frequency"):
             view.need("bandwidth", "or natural_frequency")
 
 

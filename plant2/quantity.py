@@ -138,13 +138,9 @@ KINDS: dict[str, Kind] = {
     "force": _kind("a force", "N", "0.3 N", 1e-18, 1e6),
     "torque": _kind("a torque", "N*m", "4 mN*m", 1e-18, 1e6),
     "stiffness": _kind("a stiffness", "N/m", "1.8 N/mm", 1e-15, 1e12),
-    "rotary_stiffness": _kind(
-        "a rotary stiffness, N*m per rad or deg", "N*m/rad", "12 mN*m/rad", 1e-15, 1e12
-    ),
+    "rotary_stiffness": _kind("a rotary stiffness", "N*m/rad", "12 mN*m/rad", 1e-15, 1e12),
     "damping": _kind("a damping", "N*s/m", "0.6 N*s/m", 1e-15, 1e9),
-    "rotary_damping": _kind(
-        "a rotary damping, N*m*s per rad or deg", "N*m*s/rad", "2 uN*m*s/rad", 1e-18, 1e9
-    ),
+    "rotary_damping": _kind("a rotary damping", "N*m*s/rad", "2 uN*m*s/rad", 1e-18, 1e9),
     "force_constant": _kind("a force constant", "N/A", "7 N/A", 1e-9, 1e6),
     "torque_constant": _kind("a torque constant", "N*m/A", "9 mN*m/A", 1e-12, 1e6),
     "back_emf": _kind("a back-EMF", "V*s/m", "7 V*s/m", 1e-15, 1e6),
@@ -159,14 +155,14 @@ KINDS: dict[str, Kind] = {
     "gain_db": _kind("a ratio in decibel", "dB", "8 dB", 1e-9, 1e3),
     "phase": _kind("a phase angle", "deg", "50 deg", 1e-9, 1e5),
     "count": _kind("a number of counts", "count", "2 count", 1e-9, 1e10),
-    "kp_volt": _kind("a gain, V per m", "V/m", "9 V/mm", 1e-15, 1e15),
-    "kd_volt": _kind("a gain, V*s per m", "V*s/m", "12 V*s/m", 1e-15, 1e12),
-    "kp_rotary_volt": _kind("a gain, V per rad or deg", "V/rad", "40 V/rad", 1e-15, 1e15),
-    "kd_rotary_volt": _kind("a gain, V*s per rad or deg", "V*s/rad", "0.05 V*s/rad", 1e-15, 1e12),
-    "ki_force": _kind("a gain, N per m and s", "N/m/s", "90 N/mm/s", 1e-15, 1e18),
-    "ki_torque": _kind("a gain, N*m per rad and s", "N*m/rad/s", "2 N*m/rad/s", 1e-15, 1e18),
-    "ki_volt": _kind("a gain, V per m and s", "V/m/s", "80 V/mm/s", 1e-15, 1e18),
-    "ki_rotary_volt": _kind("a gain, V per rad and s", "V/rad/s", "500 V/rad/s", 1e-15, 1e18),
+    "kp_volt": _kind("a proportional gain", "V/m", "9 V/mm", 1e-15, 1e15),
+    "kd_volt": _kind("a derivative gain", "V*s/m", "12 V*s/m", 1e-15, 1e12),
+    "kp_rotary_volt": _kind("a proportional gain", "V/rad", "40 V/rad", 1e-15, 1e15),
+    "kd_rotary_volt": _kind("a derivative gain", "V*s/rad", "0.05 V*s/rad", 1e-15, 1e12),
+    "ki_force": _kind("an integral gain", "N/m/s", "90 N/mm/s", 1e-15, 1e18),
+    "ki_torque": _kind("an integral gain", "N*m/rad/s", "2 N*m/rad/s", 1e-15, 1e18),
+    "ki_volt": _kind("an integral gain", "V/m/s", "80 V/mm/s", 1e-15, 1e18),
+    "ki_rotary_volt": _kind("an integral gain", "V/rad/s", "500 V/rad/s", 1e-15, 1e18),
 }
 """Every kind of quantity that a loop file knows, by name."""
 
@@ -174,7 +170,7 @@ KINDS: dict[str, Kind] = {
 # ---------------------------------------------------------------------------------- text to number
 
 
-def parse_quantity(text: object, kind: Kind, *, name: str = "quantity") -> float:
+def parse_quantity(text: object, kind: Kind, *, name: str = "quantity", example: str = "") -> float:
     """Read "number unit" as a number in the unit of its kind.
 
     Parameters
@@ -185,6 +181,8 @@ def parse_quantity(text: object, kind: Kind, *, name: str = "quantity") -> float
         The kind of quantity that is wanted, usually from `KINDS`.
     name : str
         What an error calls it.
+    example : str
+        A text that passes and fits the place better than the example of the kind.
 
     Returns
     -------
@@ -212,25 +210,27 @@ def parse_quantity(text: object, kind: Kind, *, name: str = "quantity") -> float
     came = quoted(text)
     if not isinstance(text, str):
         raise QuantityError(
-            name, came, f"{kind.title} is a text with its unit", _from_bare(text, kind)
+            name, came, f"{kind.title} is a text with its unit", suggestion_for(text, kind, example)
         )
     spelled = text.translate(_SPELLINGS)
     match = _PATTERN.fullmatch(spelled)
     if match is None or not _short(match[1], match[2]):
-        raise QuantityError(name, came, _pattern_rule(text, kind), suggestion_for(text, kind))
+        raise QuantityError(
+            name, came, _pattern_rule(text, kind), suggestion_for(text, kind, example)
+        )
     value = _convert(match[1], match[2], kind)
     if value is None:
         rule = _unit_rule(match[2], kind)
-        raise QuantityError(name, came, rule, suggestion_for(text, kind))
+        raise QuantityError(name, came, rule, suggestion_for(text, kind, example))
     if not _plausible(value, kind):
         rule = (
             f"{kind.title} between {kind.smallest:g} and {kind.largest:g} {kind.unit} is plausible"
         )
-        raise QuantityError(name, came, rule, suggestion_for(text, kind))
+        raise QuantityError(name, came, rule, suggestion_for(text, kind, example))
     return value
 
 
-def suggestion_for(text: object, kind: Kind) -> str:
+def suggestion_for(text: object, kind: Kind, example: str = "") -> str:
     """Guess what was meant by a text that does not pass; an example where nothing can be guessed.
 
     Parameters
@@ -239,6 +239,8 @@ def suggestion_for(text: object, kind: Kind) -> str:
         What came.
     kind : Kind
         The kind of quantity that is wanted.
+    example : str
+        A text that passes and fits the place better than the example of the kind.
 
     Returns
     -------
@@ -257,23 +259,29 @@ def suggestion_for(text: object, kind: Kind) -> str:
     >>> suggestion_for("12 mNm/rad", KINDS["rotary_stiffness"])
     '12 mN*m/rad'
     """
-    if not isinstance(text, str):
-        return _from_bare(text, kind)
-    match = _LENIENT.fullmatch(_tidy(text))
+    example = example or kind.example
+    if isinstance(text, int | float) and not isinstance(text, bool) and abs(text) < 1e15:
+        text = str(text)
+    if not isinstance(text, str) or len(text) > 200:
+        return example
+    match = _LENIENT.fullmatch(_tidy(text.strip()))
     if match is None:
-        return kind.example
+        return example
     sign, digits, exponent, rest = match[1], match[2], match[3] or "", match[4].strip()
     whole, _, decimals = digits.partition(".")
     number = sign + (whole or "0") + (f".{decimals}" if decimals else "") + exponent
-    if re.search(r"(?<!\*\*)(?<!\*\*-)[0-9]", rest) or len(text) > 200:
-        return kind.example
-    example_unit = kind.example.split(" ")[1]
-    for unit in (*_unit_candidates(rest), example_unit):
-        if _PATTERN.fullmatch(f"{number} {unit}") and _short(number, unit):
+    if re.search(r"(?<!\*\*)(?<!\*\*-)[0-9]", rest):
+        return example
+    units = list(_unit_candidates(rest))
+    # A unit of another kind says that the number means something else, too.
+    if not _is_unit(rest):
+        units.append(example.split(" ")[1])
+    for unit in units:
+        if _fits_pattern(unit) and _short(number, unit):
             value = _convert(number, unit, kind)
             if value is not None and _plausible(value, kind):
                 return f"{number} {unit}"
-    return kind.example
+    return example
 
 
 def quoted(value: object) -> str:
@@ -310,6 +318,17 @@ def quoted(value: object) -> str:
     if isinstance(value, int) and abs(value) >= 10**40:
         return "a very large number"
     return str(value)
+
+
+def _fits_pattern(unit: str) -> bool:
+    return re.fullmatch(_UNIT, unit) is not None
+
+
+def _is_unit(text: str) -> bool:
+    """Whether a text as it stands is a unit of any kind."""
+    if text in _FREQUENCIES:
+        return True
+    return _fits_pattern(text) and len(text) <= MAX_UNIT_CHARACTERS and _root(text) is not None
 
 
 def _short(number: str, unit: str) -> bool:
@@ -418,6 +437,12 @@ def _pattern_rule(text: str, kind: Kind) -> str:
         return f"{wanted}, the unit without parentheses"
     if "^" in text:
         return f"{wanted}, powers as **"
+    if re.match(r"[+-]?(\.[0-9]|[0-9]+\.(?![0-9]))", text.strip()):
+        return f"{wanted}, with digits on both sides of the decimal point"
+    if re.fullmatch(rf"{_NUMBER}.*", text) and " " in unit.strip():
+        return f"{wanted}, the unit without spaces"
+    if re.fullmatch(rf"{_NUMBER}({_UNIT})", text):
+        return f"{wanted}, with a space between them"
     return f"{wanted}, the unit of letters, *, / and ** only"
 
 
@@ -428,8 +453,8 @@ def _unit_rule(unit: str, kind: Kind) -> str:
         return f"{kind.title} takes {', '.join(own)}, not {unit}"
     for atom in re.findall(r"[A-Za-z]+", unit):
         if atom not in _atoms():
-            return f"{kind.title} is wanted, such as {kind.example}; {atom} is no unit known here"
-    return f"{kind.title} is wanted, such as {kind.example}; {unit} measures something else"
+            return f"{kind.title} in {kind.unit} or the like; {atom} is no unit that is known here"
+    return f"{kind.title} in {kind.unit} or the like, not in {unit}"
 
 
 def _tidy(text: str) -> str:
@@ -491,13 +516,6 @@ def _spellings_of(part: str) -> list[str]:
             found += [f"{head}*{other}" for other in tails]
     found += [atom for atom in _atoms_by_case().get(part.lower(), []) if atom != part]
     return found or [part]
-
-
-def _from_bare(value: object, kind: Kind) -> str:
-    """A bare number with the unit of the example; else the example itself."""
-    if isinstance(value, int | float) and not isinstance(value, bool) and abs(value) < 1e15:
-        return suggestion_for(str(value), kind)
-    return kind.example
 
 
 # ---------------------------------------------------------------------------------- number to text
