@@ -1193,6 +1193,19 @@ def selfcheck_vectors(
     notes.update(middle, middle)
     notes.same_state()
 
+    for name in ("low", "high"):
+        # A word that reset forgets keeps what stands here.
+        notes.from_state({s.name: getattr(s, name) for s in controller.state})
+        notes.reset(middle, mid_code)
+        notes.same_state()
+
+    notes.section("one code beyond the limit")
+    for output, added in ((codes[0], -1), (codes[1], 1)):
+        notes.reset(middle, output)
+        notes.update(middle, middle, added)
+        notes.update(middle, middle, -added)
+    notes.same_state()
+
     notes.section("code that holds a position")
     for position in (least, counts[0] - 1, counts[0], middle - 1, middle, middle + 1, 1, counts[1]):
         notes.resting_output(max(position, least))
