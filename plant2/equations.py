@@ -88,8 +88,19 @@ class Equation:
     limit : tuple of float or None
         (low, high) where the equation has a limit of its own. [unit of the signal]
     span : float
-        Largest magnitude the signal must be able to take without being cut; formats are chosen
-        from it. [unit of the signal]
+        Magnitude the signal must be able to take without being cut. [unit of the signal]
+    reach : float
+        Magnitude it cannot exceed while the inputs stay in range; a word-wide signal that feeds
+        itself is limited there, or at the range of its word. 0 where no limit is wanted.
+        [unit of the signal]
+    cut : tuple of (str, float) or None
+        The signal may be limited at this factor times the named signal's limit without any
+        effect on that signal. [unit per unit]
+    spare_bits : int
+        Bits of the word that the signal must leave free, for differences of it.
+    settles : str
+        What the signal is after a reset: "zero", "position", "output" or "rest" (the value at
+        which the list returns the output that was asked for).
     frac_bits : int or None
         Fraction bits where the design fixes them; None leaves the choice to `words`.
 
@@ -108,6 +119,10 @@ class Equation:
     wide: bool = False
     limit: tuple[float, float] | None = None
     span: float = 0.0
+    reach: float = 0.0
+    cut: tuple[str, float] | None = None
+    spare_bits: int = 0
+    settles: str = "zero"
     frac_bits: int | None = None
 
 
@@ -600,9 +615,7 @@ def _reaches(result: _Form, loose: Mapping[str, _Form], key: str) -> bool:
     return False
 
 
-def _as_transfer(
-    numerators: dict[str, Polynomial], denominator: Polynomial
-) -> ControllerTransfer:
+def _as_transfer(numerators: dict[str, Polynomial], denominator: Polynomial) -> ControllerTransfer:
     reference = numerators.get("reference", _ZERO)
     position = _neg(numerators.get("position", _ZERO))
     lead = denominator[0]
