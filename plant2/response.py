@@ -376,7 +376,7 @@ def part_of(trajectory: Trajectory, load: Callable[[], Trajectory] | None = None
     -----
     Pieces that may hold an extreme are found by bounds, and only those are looked into.
     """
-    fine = _fine(trajectory)
+    fine = finely_divided(trajectory)
     return _part(trajectory, fine, _scan(fine), load)
 
 
@@ -577,14 +577,42 @@ def _combined(states: Real, row: Real) -> Real:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Row:
-    """One quantity of a piece: row x + gain u + gain_force F."""
+class Quantity:
+    """Something that is linear in state, input and force: row x + gain u + gain_force F.
+
+    Parameters
+    ----------
+    row : array of float, shape (n,)
+        Weight of the states. [by the states]
+    gain : float
+        Weight of the input. [by the input]
+    gain_force : float
+        Weight of the force on the main mass. [by the force]
+
+    Notes
+    -----
+    Positions, velocities, accelerations and forces between bodies are of this kind.
+    """
 
     row: Real
     gain: float
     gain_force: float
 
     def at(self, states: Real, inputs: Real, forces: Real) -> Real:
+        """Its values.
+
+        Parameters
+        ----------
+        states : array of float, shape (..., n)
+            States. [SI by the states]
+        inputs, forces : array of float, shape (...)
+            Input and force on the main mass. [N, N m or V]
+
+        Returns
+        -------
+        array of float, shape (...)
+            The quantity.
+        """
         value = _combined(states, self.row)
         if self.gain != 0.0:
             value = value + self.gain * inputs
@@ -592,9 +620,20 @@ class _Row:
             value = value + self.gain_force * forces
         return value
 
-    def slope(self, space: StateSpace) -> _Row:
-        """Its derivative; the quantity must not jump with the inputs inside a piece."""
-        return _Row(
+    def slope(self, space: StateSpace) -> Quantity:
+        """Its derivative while the inputs are held.
+
+        Parameters
+        ----------
+        space : StateSpace
+            How the state moves.
+
+        Returns
+        -------
+        Quantity
+            row a x + row b u + row b_force F.
+        """
+        return Quantity(
             row=self.row @ space.a,
             gain=float(self.row @ space.b),
             gain_force=float(self.row @ space.b_force),
@@ -606,21 +645,33 @@ class _Kind:
     """A plant, free or held, with what a search inside a piece needs."""
 
     space: StateSpace
-    position: _Row
-    velocity: _Row
-    acceleration: _Row
+    position: Quantity
+    velocity: Quantity
+    acceleration: Quantity
 
 
 def _kind(space: StateSpace, row: Real) -> _Kind:
-    position = _Row(row=row, gain=0.0, gain_force=0.0)
+    position = Quantity(row=row, gain=0.0, gain_force=0.0)
     velocity = position.slope(space)
     return _Kind(
         space=space, position=position, velocity=velocity, acceleration=velocity.slope(space)
     )
 
 
-class _Halves:
-    """Transitions over span/2, span/4, ...: any time of a piece by steps forward only."""
+class Halves:
+    """Transitions over span/2, span/4, ...: any time of a piece by steps forward only.
+
+    Parameters
+    ----------
+    space : StateSpace
+        The plant.
+    span_s : float
+        Longer than any piece. [s]
+
+    Notes
+    -----
+    50 levels: a time is met to 2^-50 of the span, whatever the time constants of the plant.
+    """
 
     def __init__(self, space: StateSpace, span_s: float) -> None:
         self.span_s = span_s
@@ -638,13 +689,27 @@ class _Halves:
         inputs: Real,
         forces: Real,
         spans_s: Real,
-        quantity: _Row,
+        quantity: Quantity,
         offset: Real,
         sign: Real,
     ) -> tuple[Real, Real]:
-        """Last time up to which ``sign (quantity + offset) > 0`` on the way, and the state there.
+        """Last time up to which ``sign (quantity + offset) > 0``, and the state there.
 
-        The expression changes its sign at most once in each span; shapes (j, n), (j,), ...
+        Parameters
+        ----------
+        states : array of float, shape (j, n)
+            Where to begin. [SI by the states]
+        inputs, forces, spans_s : array of float, shape (j,)
+            What is held, and for how long at most. [N, N m or V; N or N m; s]
+        quantity : Quantity
+            What is watched.
+        offset, sign : array of float, shape (j,)
+            The expression may change its sign once in its span. [by the quantity; -]
+
+        Returns
+        -------
+        tuple of two arrays of float, shapes (j,) and (j, n)
+            Times from the beginning and states. [s; SI by the states]
         """
         n = states.shape[1]
         full = np.concatenate([states, inputs[:, np.newaxis], forces[:, np.newaxis]], axis=1)
@@ -660,7 +725,20 @@ class _Halves:
         return theta, full[:, :n].copy()
 
     def advance(self, states: Real, inputs: Real, forces: Real, spans_s: Real) -> Real:
-        """States after the given spans, each at most the table's; shapes (j, n), (j,), ..."""
+        """States after some spans.
+
+        Parameters
+        ----------
+        states : array of float, shape (j, n)
+            Where to begin. [SI by the states]
+        inputs, forces, spans_s : array of float, shape (j,)
+            What is held, and for how long. [N, N m or V; N or N m; s]
+
+        Returns
+        -------
+        array of float, shape (j, n)
+            The states then. [SI by the states]
+        """
         n = states.shape[1]
         full = np.concatenate([states, inputs[:, np.newaxis], forces[:, np.newaxis]], axis=1)
         left = spans_s.copy()
@@ -672,12 +750,29 @@ class _Halves:
 
 
 @lru_cache(maxsize=64)
-def _halves(space: StateSpace, exponent: int) -> _Halves:
-    return _Halves(space, math.ldexp(1.0, exponent))
+def _halves(space: StateSpace, exponent: int) -> Halves:
+    return Halves(space, math.ldexp(1.0, exponent))
 
 
-def _halves_for(space: StateSpace, longest_s: float) -> _Halves:
-    """Halves of a power of two above the longest span, so that few tables serve all."""
+def halves_for(space: StateSpace, longest_s: float) -> Halves:
+    """Halves of a power of two above the longest span, so that few tables serve all.
+
+    Parameters
+    ----------
+    space : StateSpace
+        The plant.
+    longest_s : float
+        Longest piece, above 0. [s]
+
+    Returns
+    -------
+    Halves
+        Kept for the next caller.
+
+    Notes
+    -----
+    The next power of two; times of its halves are exact in binary.
+    """
     return _halves(space, math.frexp(longest_s)[1])
 
 
@@ -689,7 +784,7 @@ class _Scan:
     upper: Real
     positions: Real
     kinds: tuple[_Kind, ...]
-    halves: tuple[_Halves, ...]
+    halves: tuple[Halves, ...]
 
 
 def _hull(
@@ -731,7 +826,7 @@ def _scan(trajectory: Trajectory, row: Real | None = None) -> _Scan:
     states, inputs, forces = trajectory.states, trajectory.inputs, trajectory.forces
     positions = _combined(states, row)
 
-    def ends(quantity: _Row) -> tuple[Real, Real]:
+    def ends(quantity: Quantity) -> tuple[Real, Real]:
         whole = _combined(states, quantity.row)
         added = quantity.gain * inputs + quantity.gain_force * forces
         return whole[:-1] + added, whole[1:] + added
@@ -750,7 +845,7 @@ def _scan(trajectory: Trajectory, row: Real | None = None) -> _Scan:
         upper=upper,
         positions=positions,
         kinds=tuple(kinds),
-        halves=tuple(_halves_for(kind.space, longest_s) for kind in kinds),
+        halves=tuple(halves_for(kind.space, longest_s) for kind in kinds),
     )
 
 
@@ -794,7 +889,7 @@ def _open(trajectory: Trajectory, scan: _Scan, pieces: Whole, lanes: Whole) -> _
 
 def _cut(
     kind: _Kind,
-    halves: _Halves,
+    halves: Halves,
     chosen: Whole,
     inputs: Real,
     forces: Real,
@@ -872,16 +967,74 @@ def _cross(opened: _Opened, scan: _Scan, which: Whole, leg: Whole, level: Real, 
     return times
 
 
-def _fine(trajectory: Trajectory) -> Trajectory:
-    """The same motion with nodes no further apart than 1/8 period of the fastest oscillation."""
-    space = trajectory.space
+@lru_cache(maxsize=64)
+def longest_piece_s(space: StateSpace, held: bool = False) -> float:
+    """Length of a piece in which a motion can be searched for extremes.
+
+    Parameters
+    ----------
+    space : StateSpace
+        The plant.
+    held : bool
+        Whether the main mass may also be held. [-]
+
+    Returns
+    -------
+    float
+        1/8 period of the fastest oscillation; infinite without one. [s]
+
+    Notes
+    -----
+    From the imaginary parts of the eigenvalues; own rule.
+    """
     fastest = float(np.abs(np.linalg.eigvals(space.a).imag).max())
-    if trajectory.held is not None:
+    if held:
         still = np.linalg.eigvals(held_space(space).a)
         fastest = max(fastest, float(np.abs(still.imag).max()))
-    if fastest == 0.0:
-        return trajectory
-    longest_s = 2.0 * math.pi / fastest / 8.0
+    return math.inf if fastest == 0.0 else 2.0 * math.pi / fastest / 8.0
+
+
+def reach(trajectory: Trajectory, row: Real) -> tuple[Real, Real]:
+    """Bounds of a position over a whole motion, between the nodes too.
+
+    Parameters
+    ----------
+    trajectory : Trajectory
+        The motion.
+    row : array of float, shape (n,)
+        Which position, such as ``space.c_main_position``.
+
+    Returns
+    -------
+    tuple of two arrays of float, shape (lanes,)
+        No less than this, no more than that; close, not exact. [m or rad]
+
+    Notes
+    -----
+    Tangents at the ends of each piece, see `step_figures` for the exact extremes.
+    """
+    scan = _scan(finely_divided(trajectory), row)
+    return scan.lower.min(axis=0), scan.upper.max(axis=0)
+
+
+def finely_divided(trajectory: Trajectory) -> Trajectory:
+    """The same motion with more nodes, so that each piece turns a few times at most.
+
+    Parameters
+    ----------
+    trajectory : Trajectory
+        The motion.
+
+    Returns
+    -------
+    Trajectory
+        Nodes no further apart than `longest_piece_s`.
+
+    Notes
+    -----
+    States between the nodes come from transition matrices, nothing is interpolated.
+    """
+    longest_s = longest_piece_s(trajectory.space, held=trajectory.held is not None)
     spans = np.diff(trajectory.times_s)
     counts = np.maximum(np.ceil(spans / longest_s * (1.0 - 1e-9)).astype(np.int64), 1)
     if counts.max() == 1:
@@ -890,7 +1043,7 @@ def _fine(trajectory: Trajectory) -> Trajectory:
     piece = np.repeat(np.arange(spans.size), counts)
     number = np.arange(piece.size) - np.repeat(np.cumsum(counts) - counts, counts)
     steps = spans / counts
-    lanes, n = trajectory.lanes, space.a.shape[0]
+    lanes, n = trajectory.lanes, trajectory.states.shape[2]
     states = np.empty((piece.size + 1, lanes, n))
     first = np.nonzero(number == 0)[0]
     states[first] = trajectory.states[:-1]
@@ -920,11 +1073,11 @@ def _after(trajectory: Trajectory, pieces: Whole, states: Real, spans: Real) -> 
     forces = trajectory.forces[pieces].reshape(-1)
     times = np.repeat(spans, lanes)
     longest_s = float(spans.max())
-    result = _halves_for(trajectory.space, longest_s).advance(flat, inputs, forces, times)
+    result = halves_for(trajectory.space, longest_s).advance(flat, inputs, forces, times)
     if trajectory.held is not None:
         held = trajectory.held[pieces].reshape(-1)
         if held.any():
-            still = _halves_for(held_space(trajectory.space), longest_s)
+            still = halves_for(held_space(trajectory.space), longest_s)
             result[held] = still.advance(flat[held], inputs[held], forces[held], times[held])
     return result.reshape(k, lanes, n)
 
@@ -957,7 +1110,7 @@ class _Look:
     """A motion, finely divided, with its bounds."""
 
     def __init__(self, trajectory: Trajectory) -> None:
-        self.fine = _fine(trajectory)
+        self.fine = finely_divided(trajectory)
         self.scan = _scan(self.fine)
 
 
@@ -1095,7 +1248,7 @@ def _integrals_of_kind(trajectory: Trajectory, space: StateSpace, spans: Real) -
         k, lanes = spans.size, trajectory.lanes
         start = np.zeros((k * lanes, n + 1))
         start[:, :n] = states[:-1].reshape(k * lanes, n)
-        end = _halves_for(wide, float(spans.max())).advance(
+        end = halves_for(wide, float(spans.max())).advance(
             start, inputs.reshape(-1), forces.reshape(-1), np.repeat(spans, lanes)
         )
         return end[:, n].reshape(k, lanes)

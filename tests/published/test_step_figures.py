@@ -97,7 +97,7 @@ def test_properties_of_second_order_systems(zeta: float, overshoot: float, settl
 def test_fastest_settling_damping(band: float, printed: float) -> None:
     """The damping ratio that settles fastest; the curve with its jump is Ogata's fig. 5-11.
 
-    Known result (from memory). Searched here, first coarsely, then in steps of 0.0001; nothing is assumed.
+    Known result (from memory). Searched here in three passes, the last in steps of 0.0001.
     """
 
     def search(grid: np.ndarray) -> tuple[int, list[float]]:
