@@ -308,7 +308,9 @@ def _balanced(m: Real) -> Real:
 def _controller_at(control: DeltaController, delta: Complex) -> tuple[Complex, Complex]:
     """Values from position and from reference at delta."""
     den = np.polyval(control.denominator, delta)
-    return np.polyval(control.position, delta) / den, np.polyval(control.reference, delta) / den
+    position: Complex = np.asarray(np.polyval(control.position, delta) / den, dtype=complex)
+    reference: Complex = np.asarray(np.polyval(control.reference, delta) / den, dtype=complex)
+    return position, reference
 
 
 def _loop_gain_and_slope(loop: ClosedLoop, delta: Complex) -> tuple[Complex, Complex]:

@@ -14,6 +14,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,7 +25,6 @@ from plant2.closedloop import (
     bandwidth_rad_per_s,
     circle,
     gain_crossings,
-    is_stable,
     log_pole,
     pair_figures,
     poles_delta,
@@ -818,7 +818,7 @@ def controller_of(task: Task, gains: Gains) -> Controller:
         position, reference = np.polymul(position, factor), np.polymul(reference, factor)
     scale = 1.0 / (task.count_per_position * task.effort_per_code)
 
-    def padded(p: Real) -> Real:
+    def padded(p: NDArray[np.floating[Any]]) -> Real:
         return np.concatenate([np.zeros(len(den) - len(p)), np.asarray(p, dtype=float)])
 
     return Controller(
@@ -1653,6 +1653,9 @@ def controller_equations(task: Task, gains: Gains, word_bits: int) -> Equations:
     sensor_high = sensor.high_count - sensor.zero_count
     if sensor.polarity < 0:
         sensor_low, sensor_high = -sensor_high, -sensor_low
+    # the one count whose negative does not fit a word acts as its neighbour
+    top = 2 ** (word_bits - 1) - 1
+    sensor_low, sensor_high = max(sensor_low, -top - 1), min(sensor_high, top)
     reach = math.floor(loop.mechanics.travel / sensor.step * (1.0 + 1e-12))
     # reference: the code range, and the travel
     low = max(sensor_low, -reach)
@@ -1858,7 +1861,7 @@ def controller_equations(task: Task, gains: Gains, word_bits: int) -> Equations:
         )
         before = "demand_code"
         for i, s in enumerate(sections, 1):
-            rows += _notch_rows(i, s, before, limit)
+            rows += _notch_rows(i, s, before, limit, total)
             before = f"notch{i}_code"
         rows.append(
             Equation(
@@ -1926,7 +1929,7 @@ def _windup_shift(gains: Gains, period_s: float) -> int:
     return max(1, min(16, round(math.log2(max(tracking_s / period_s, 2.0)))))
 
 
-def _notch_rows(number: int, s: Section, before: str, limit: float) -> list[Equation]:
+def _notch_rows(number: int, s: Section, before: str, limit: float, reach: float) -> list[Equation]:
     """Four equations of one notch on differences."""
     name = f"notch{number}"
     # In z: denominator z^2 + a1 z + a2, numerator b0 z^2 + b1 z + b2, equal sums sigma.
@@ -1966,7 +1969,7 @@ def _notch_rows(number: int, s: Section, before: str, limit: float) -> list[Equa
             ),
             carry=True,
             span=4.0 * limit,
-            reach=1e18,
+            reach=reach,
             spare_bits=1,
             settles="output",
         ),

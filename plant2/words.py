@@ -236,10 +236,10 @@ class _Builder:
         self.formats[e.name] = _Format(frac_bits=frac, limit=None)
 
     def integral_format(self, e: Equation) -> None:
-        """A sum-wide signal that feeds itself: a quarter of the sum's range for its own limit."""
+        """A sum-wide signal that feeds itself: half of the sum's range for its own limit."""
         if e.limit is None:
             return
-        room = self.sum_bits - 3
+        room = self.sum_bits - 2
         frac = room - math.ceil(math.log2(max(e.limit[1], 1.0)))
         self.formats[e.name] = _Format(
             frac_bits=frac,
