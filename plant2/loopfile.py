@@ -18,7 +18,7 @@ import hashlib
 import math
 import re
 import tomllib
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Mapping, MutableMapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from pathlib import Path
@@ -644,42 +644,39 @@ _KP = ("stiffness", "rotary_stiffness", "kp_volt", "kp_rotary_volt")
 _KD = ("damping", "rotary_damping", "kd_volt", "kd_rotary_volt")
 _KI = ("ki_force", "ki_torque", "ki_volt", "ki_rotary_volt")
 
-_Opt = float | None
-_AnyLength = Annotated[_Opt, _quantity(*_LENGTHS, sign="any", example=("0 mm", "0 deg"))]
-_Length = Annotated[_Opt, _quantity(*_LENGTHS, example=("1.5 mm", "6 deg"))]
-_Step = Annotated[_Opt, _quantity(*_LENGTHS, example=("80 um", "0.2 deg"))]
-_Small = Annotated[_Opt, _quantity(*_LENGTHS, example=("1.5 um", "20 urad"))]
-_Noise = Annotated[_Opt, _quantity(*_LENGTHS, sign="at least 0", example=("50 nm", "2 urad"))]
-_Mass = Annotated[_Opt, _quantity(*_MASSES)]
-_AnyForce = Annotated[_Opt, _quantity(*_FORCES, sign="any", example=("0 N", "0 N*m"))]
-_Force = Annotated[_Opt, _quantity(*_FORCES, sign="at least 0", example=("0 N", "0 N*m"))]
-_Damping = Annotated[_Opt, _quantity(*_DAMPINGS, sign="at least 0")]
-_Stiffness = Annotated[_Opt, _quantity(*_STIFFNESSES, sign="at least 0")]
-_Frequency = Annotated[_Opt, _quantity("frequency")]
-_HighFrequency = Annotated[_Opt, _quantity("frequency", example="1.7 kHz")]
-_Time = Annotated[_Opt, _quantity("time")]
-_Delay = Annotated[_Opt, _quantity("time", sign="at least 0", example="20 us")]
-_Current = Annotated[_Opt, _quantity("current", example="0.7 A")]
-_Drive = Annotated[_Opt, _quantity(*_DRIVES)]
-_Whole = Annotated[_Opt, _quantity("ratio", sign="at least 0", below="100 %")]
-_Part = Annotated[_Opt, _quantity("ratio", sign="at least 0", below="90 %")]
-_Decibel = Annotated[_Opt, _quantity("gain_db")]
-_Count = Annotated[_Opt, _quantity("count", sign="at least 0")]
-_Ratio = Annotated[_Opt, _number(0.0, 5.0, "0.02")]
-_Sign = Annotated[int | None, _choice(1, -1, example=1)]
-_Bits = Annotated[int | None, _integer(2, 32, "12")]
-_Code = Annotated[int | None, _integer(-(1 << 31), (1 << 32) - 1, "0")]
-_Coding = Annotated[str | None, _choice("signed", "unsigned", example="signed")]
-_Text = str | None
-_Name = Annotated[_Text, PlainValidator(_Rule(read=_read_name, example=lambda s: '"x_stage"'))]
-_About = Annotated[_Text, PlainValidator(_Rule(read=_read_about, example=lambda s: '""'))]
+# Any: the rule alone decides, and pydantic need not prepare for a type (a third of its time).
+_AnyLength = Annotated[Any, _quantity(*_LENGTHS, sign="any", example=("0 mm", "0 deg"))]
+_Length = Annotated[Any, _quantity(*_LENGTHS, example=("1.5 mm", "6 deg"))]
+_Step = Annotated[Any, _quantity(*_LENGTHS, example=("80 um", "0.2 deg"))]
+_Small = Annotated[Any, _quantity(*_LENGTHS, example=("1.5 um", "20 urad"))]
+_Noise = Annotated[Any, _quantity(*_LENGTHS, sign="at least 0", example=("50 nm", "2 urad"))]
+_Mass = Annotated[Any, _quantity(*_MASSES)]
+_AnyForce = Annotated[Any, _quantity(*_FORCES, sign="any", example=("0 N", "0 N*m"))]
+_Force = Annotated[Any, _quantity(*_FORCES, sign="at least 0", example=("0 N", "0 N*m"))]
+_Damping = Annotated[Any, _quantity(*_DAMPINGS, sign="at least 0")]
+_Stiffness = Annotated[Any, _quantity(*_STIFFNESSES, sign="at least 0")]
+_Frequency = Annotated[Any, _quantity("frequency")]
+_HighFrequency = Annotated[Any, _quantity("frequency", example="1.7 kHz")]
+_Time = Annotated[Any, _quantity("time")]
+_Delay = Annotated[Any, _quantity("time", sign="at least 0", example="20 us")]
+_Current = Annotated[Any, _quantity("current", example="0.7 A")]
+_Drive = Annotated[Any, _quantity(*_DRIVES)]
+_Whole = Annotated[Any, _quantity("ratio", sign="at least 0", below="100 %")]
+_Part = Annotated[Any, _quantity("ratio", sign="at least 0", below="90 %")]
+_Decibel = Annotated[Any, _quantity("gain_db")]
+_Count = Annotated[Any, _quantity("count", sign="at least 0")]
+_Ratio = Annotated[Any, _number(0.0, 5.0, "0.02")]
+_Sign = Annotated[Any, _choice(1, -1, example=1)]
+_Bits = Annotated[Any, _integer(2, 32, "12")]
+_Code = Annotated[Any, _integer(-(1 << 31), (1 << 32) - 1, "0")]
+_Coding = Annotated[Any, _choice("signed", "unsigned", example="signed")]
+_Name = Annotated[Any, PlainValidator(_Rule(read=_read_name, example=lambda s: '"x_stage"'))]
+_About = Annotated[Any, PlainValidator(_Rule(read=_read_about, example=lambda s: '""'))]
 _BiasTolerance = Annotated[
-    tuple[str, float] | None,
-    PlainValidator(_Rule(read=_read_bias_tolerance, example=lambda s: '"10 %"')),
+    Any, PlainValidator(_Rule(read=_read_bias_tolerance, example=lambda s: '"10 %"'))
 ]
 _DampingTarget = Annotated[
-    float | str | None,
-    PlainValidator(_Rule(read=_read_damping_target, example=lambda s: "0.7")),
+    Any, PlainValidator(_Rule(read=_read_damping_target, example=lambda s: "0.7"))
 ]
 
 
@@ -695,7 +692,7 @@ class _LoopTable(_Table):
 
 
 class _PlantTable(_Table):
-    motion: Annotated[str | None, _choice("linear", "rotary", example="linear")] = None
+    motion: Annotated[Any, _choice("linear", "rotary", example="linear")] = None
     mass: _Mass = None
     damping: _Damping = None
     stiffness: _Stiffness = None
@@ -727,19 +724,19 @@ class _ModeTable(_Table):
 
 
 class _ActuatorTable(_Table):
-    drive: Annotated[str | None, _choice("current", "voltage", example="current")] = None
-    force_constant: Annotated[_Opt, _quantity("force_constant", "torque_constant")] = None
+    drive: Annotated[Any, _choice("current", "voltage", example="current")] = None
+    force_constant: Annotated[Any, _quantity("force_constant", "torque_constant")] = None
     full_scale: _Drive = None
     bits: _Bits = None
     coding: _Coding = None
     zero_code: _Code = None
     polarity: _Sign = None
     limit: _Drive = None
-    bandwidth: Annotated[_Opt, _quantity("frequency", example="5 kHz")] = None
+    bandwidth: Annotated[Any, _quantity("frequency", example="5 kHz")] = None
     continuous: _Current = None
-    resistance: Annotated[_Opt, _quantity("resistance")] = None
-    inductance: Annotated[_Opt, _quantity("inductance", sign="at least 0")] = None
-    back_emf: Annotated[_Opt, _quantity("back_emf", "rotary_back_emf", sign="at least 0")] = None
+    resistance: Annotated[Any, _quantity("resistance")] = None
+    inductance: Annotated[Any, _quantity("inductance", sign="at least 0")] = None
+    back_emf: Annotated[Any, _quantity("back_emf", "rotary_back_emf", sign="at least 0")] = None
 
 
 class _SensorTable(_Table):
@@ -751,37 +748,37 @@ class _SensorTable(_Table):
     polarity: _Sign = None
     noise: _Noise = None
     noise_peak: _Noise = None
-    filter_corner: Annotated[_Opt, _quantity("frequency", example="15 kHz")] = None
+    filter_corner: Annotated[Any, _quantity("frequency", example="15 kHz")] = None
 
 
 class _ProcessorTable(_Table):
-    core: Annotated[str | None, _choice(*CORES, example="cortex-m4")] = None
-    clock: Annotated[_Opt, _quantity("frequency", example="48 MHz")] = None
-    wait_states: Annotated[int | None, _integer(0, 15, "0")] = None
-    sample_rate: Annotated[_Opt, _quantity("frequency", example="16 kHz")] = None
+    core: Annotated[Any, _choice(*CORES, example="cortex-m4")] = None
+    clock: Annotated[Any, _quantity("frequency", example="48 MHz")] = None
+    wait_states: Annotated[Any, _integer(0, 15, "0")] = None
+    sample_rate: Annotated[Any, _quantity("frequency", example="16 kHz")] = None
     delay: _Delay = None
-    word: Annotated[int | str | None, _choice(16, 32, "auto", example=32)] = None
+    word: Annotated[Any, _choice(16, 32, "auto", example=32)] = None
 
 
 class _AimTable(_Table):
-    law: Annotated[str | None, _choice("pd", "lead", "pid", example="pd")] = None
+    law: Annotated[Any, _choice("pd", "lead", "pid", example="pd")] = None
     damping_ratio: _DampingTarget = None
     bandwidth: _Frequency = None
-    natural_frequency: Annotated[_Opt, _quantity("frequency", example="100 Hz")] = None
-    crossover: Annotated[_Opt, _quantity("frequency", example="120 Hz")] = None
-    phase_margin: Annotated[_Opt, _quantity("phase", below="179 deg")] = None
-    derivative_corner: Annotated[_Opt, _quantity("frequency", example="1.2 kHz")] = None
-    integral_corner: Annotated[_Opt, _quantity("frequency", example="8 Hz")] = None
-    kp: Annotated[_Opt, _quantity(*_KP, sign="any")] = None
-    kd: Annotated[_Opt, _quantity(*_KD, sign="any")] = None
-    ki: Annotated[_Opt, _quantity(*_KI, sign="any")] = None
-    beta: Annotated[_Opt, _number(0.0, 10.0, "0.5")] = None
+    natural_frequency: Annotated[Any, _quantity("frequency", example="100 Hz")] = None
+    crossover: Annotated[Any, _quantity("frequency", example="120 Hz")] = None
+    phase_margin: Annotated[Any, _quantity("phase", below="179 deg")] = None
+    derivative_corner: Annotated[Any, _quantity("frequency", example="1.2 kHz")] = None
+    integral_corner: Annotated[Any, _quantity("frequency", example="8 Hz")] = None
+    kp: Annotated[Any, _quantity(*_KP, sign="any")] = None
+    kd: Annotated[Any, _quantity(*_KD, sign="any")] = None
+    ki: Annotated[Any, _quantity(*_KI, sign="any")] = None
+    beta: Annotated[Any, _number(0.0, 10.0, "0.5")] = None
 
 
 class _NotchTable(_Table):
     frequency: _HighFrequency = None
-    width: Annotated[_Opt, _number(0.0, 10.0, "0.2", open_low=True)] = None
-    depth: Annotated[_Opt, _quantity("gain_db", below="120 dB", example="18 dB")] = None
+    width: Annotated[Any, _number(0.0, 10.0, "0.2", open_low=True)] = None
+    depth: Annotated[Any, _quantity("gain_db", below="120 dB", example="18 dB")] = None
 
 
 class _CheckTable(_Table):
@@ -789,22 +786,22 @@ class _CheckTable(_Table):
 
 
 class _LimitsTable(_Table):
-    overshoot: Annotated[_Opt, _quantity("ratio", sign="at least 0", below="100 %")] = None
-    settling_time: Annotated[_Opt, _quantity("time", example="10 ms")] = None
-    settling_band: Annotated[_Opt, _quantity("ratio", below="50 %", example="1 %")] = None
+    overshoot: Annotated[Any, _quantity("ratio", sign="at least 0", below="100 %")] = None
+    settling_time: Annotated[Any, _quantity("time", example="10 ms")] = None
+    settling_band: Annotated[Any, _quantity("ratio", below="50 %", example="1 %")] = None
     final_error: _Small = None
-    phase_margin: Annotated[_Opt, _quantity("phase", below="180 deg")] = None
+    phase_margin: Annotated[Any, _quantity("phase", below="180 deg")] = None
     gain_margin: _Decibel = None
     gain_reduction: _Decibel = None
     delay_margin: _Time = None
-    peak_sensitivity: Annotated[_Opt, _number(1.0, 1000.0, "1.9", open_low=True)] = None
+    peak_sensitivity: Annotated[Any, _number(1.0, 1000.0, "1.9", open_low=True)] = None
     position_noise: _Small = None
-    stiffness_at_dc: Annotated[_Opt, _quantity(*_STIFFNESSES)] = None
+    stiffness_at_dc: Annotated[Any, _quantity(*_STIFFNESSES)] = None
     deviation: _Count = None
     limit_cycle: _Count = None
     rms_current: _Current = None
     update_time: _Time = None
-    load: Annotated[_Opt, _quantity("ratio", below="100 %", example="40 %")] = None
+    load: Annotated[Any, _quantity("ratio", below="100 %", example="40 %")] = None
 
 
 _TABLES: dict[str, type[_Table]] = {
@@ -963,15 +960,15 @@ def _toml_complaint(text: str, message: str) -> Complaint:
     match = re.fullmatch(r"(.*) \(at (?:line (\d+), column (\d+)|end of document)\)", message, re.S)
     if match is None:
         return Complaint(allowed=f"no toml: {message[:1].lower()}{message[1:]}")
-    lines = text.split("\n")
+    lines = text.rstrip().split("\n")
     number = int(match[2]) if match[2] else len(lines)
     line = lines[number - 1].strip() if number <= len(lines) else ""
-    came = "".join(c if c.isprintable() else ascii(c)[1:-1] for c in line[:60])
+    came = _plain(line)
     what = match[1][:1].lower() + match[1][1:]
-    where = f"line {number}, column {match[3]}" if match[2] else "end of the file"
+    where = f"line {number}, " + (f"column {match[3]}" if match[2] else "end of the file")
     bare = re.fullmatch(r"([A-Za-z_]+)\s*=\s*([^\"'\[\]{}#]+?)\s*(#.*)?", line)
     remedy = f'{bare[1]} = "{bare[2]}"' if bare and bare[2].isprintable() else ""
-    return Complaint(allowed=f"{where}: {what}" + (f", in: {came}" if came else ""), remedy=remedy)
+    return Complaint(allowed=f"{where}{came and f' ({came})'}: {what}", remedy=remedy)
 
 
 # ---------------------------------------------------------------------------------------- overrides
@@ -997,39 +994,51 @@ def _override(data: dict[str, Any], text: str) -> list[Complaint]:
             Complaint(key=f"--set {quoted(text)}", allowed=rule, remedy="--set 'plant.mass=52 g'")
         ]
     value = _override_value(written.strip())
-    table = ".".join(part for part in parts if not part.isdigit())
+    table = ".".join(part for part in parts if not _is_index(part))
     if table in _LISTED and isinstance(value, list) and len(parts) == 2:
         node = data.setdefault(parts[0], {})
         if isinstance(node, dict):
             node[parts[1]] = value
         return []
-    shown = ".".join("0" if part.isdigit() else part for part in parts)
+    label = f"--set {_plain('.'.join(parts))}"
+    return _put(data, parts, value, label=label, written=_plain(written.strip()))
+
+
+def _plain(text: str) -> str:
+    """A text for a message: short, and on one line."""
+    return quoted(text)[1:-1]
+
+
+def _is_index(part: str) -> bool:
+    return part.isascii() and part.isdigit()
+
+
+def _put(
+    data: MutableMapping[str, Any], parts: list[str], value: Any, *, label: str, written: str
+) -> list[Complaint]:
+    """Put a value at a known path; complaints instead where there is no such path."""
+    shown = ".".join("0" if _is_index(part) else part for part in parts)
     if shown not in _known_paths():
         near = _nearest_path(parts)
         rule = f"there is no such key; the nearest is {near}"
-        return [
-            Complaint(
-                key=f"--set {'.'.join(parts)[:60]}",
-                came=quoted(value),
-                allowed=rule,
-                remedy=f"--set '{near}={written.strip()[:60]}'",
-                nearest=near,
-            )
-        ]
-    node = data
+        line = f"--set '{near}={written}'"
+        return [Complaint(key=label, came=quoted(value), allowed=rule, remedy=line, nearest=near)]
+    node: Any = data
     for index, part in enumerate(parts[:-1]):
         if isinstance(node, list):
+            if not _is_index(part):
+                break
             number = int(part) if len(part) < 6 else len(node)
             if number >= len(node):
                 name = ".".join(parts[:index])
                 rule = f"the file has {len(node)} of [[{name}]]; they count from 0"
-                return [Complaint(key=f"--set {'.'.join(parts)}", came=quoted(value), allowed=rule)]
+                return [Complaint(key=label, came=quoted(value), allowed=rule)]
             node = node[number]
-        elif isinstance(node, dict):
+        elif isinstance(node, MutableMapping):
             fresh: Any = [] if ".".join(parts[: index + 1]) in _LISTED else {}
             node = node.setdefault(part, fresh)
     # A table of the wrong type is complained about where tables are looked at.
-    if isinstance(node, dict):
+    if isinstance(node, MutableMapping):
         node[parts[-1]] = value
     return []
 
@@ -1052,6 +1061,50 @@ def _nearest_path(parts: list[str]) -> str:
 def _nearest(name: str, known: Iterable[str]) -> str:
     """The known name that looks most like it; always one."""
     return difflib.get_close_matches(name[:60], list(known), n=1, cutoff=0.0)[0]
+
+
+# ------------------------------------------------------------------------------------- writing back
+
+
+def text_with_values(text: str, values: Mapping[str, str | int | float]) -> str:
+    """Replace values in the text of a loop file; comments and order stay.
+
+    Parameters
+    ----------
+    text : str
+        A loop file.
+    values : mapping of str to str, int or float
+        New values by path, such as {"plant.mass": "52 g"}. [in the value's own text]
+
+    Returns
+    -------
+    str
+        The text with the values in place; a key that was not there stands last in its table.
+
+    Raises
+    ------
+    LoopFileError
+        If the text is no TOML, or if a path is no key of a loop file.
+
+    Notes
+    -----
+    Nothing but the paths is checked; `loop_from_text` checks the result.
+
+    Examples
+    --------
+    >>> text_with_values('[plant]\\nmass = "48 g"  # weighed\\n', {"plant.mass": "52 g"})
+    '[plant]\\nmass = "52 g"  # weighed\\n'
+    """
+    import tomlkit
+
+    complaints: list[Complaint] = []
+    _parse_toml(text, "")
+    document = tomlkit.parse(text)
+    for path, value in values.items():
+        complaints += _put(document, path.split("."), value, label=path, written=_plain(str(value)))
+    if complaints:
+        raise LoopFileError(tuple(complaints))
+    return tomlkit.dumps(document)
 
 
 # ---------------------------------------------------------------------------- tables and their keys
@@ -1609,7 +1662,7 @@ def _actuator(view: _View, assumptions: list[str]) -> Actuator:
     )
 
 
-MAX_DELAY_PERIODS = 50
+MAX_DELAY_PERIODS = 200
 """Longest delay in sample periods."""
 
 
@@ -1647,7 +1700,7 @@ def _complain_about_word(converter: _View, word: int) -> None:
     unsigned = converter.get("coding") == "unsigned"
     most = word - 1 if unsigned else word
     bits = converter.get("bits")
-    if bits is None and converter.sound("resolution"):
+    if bits is None and converter.table == "sensor" and converter.sound("resolution"):
         bits = ENCODER_BITS
     if bits is not None and bits > most:
         sort = "unsigned codes" if unsigned else "codes"
@@ -1720,8 +1773,6 @@ def _complain_about_targets(view: _View, law: str) -> None:
     """Targets or gains, not both; those that belong to the law, all of them."""
     gains = [key for key in _GAINS if view.given(key)]
     targets = [key for key in (*_PAIR_TARGETS, *_LEAD_TARGETS) if view.given(key)]
-    if view.given("ki") and law != "pid":
-        view.complain("ki", f"this goes with law = pid; leave it out of law = {law}")
     if gains and targets:
         view.complain(
             gains[0],
@@ -1729,6 +1780,8 @@ def _complain_about_targets(view: _View, law: str) -> None:
         )
         return
     if gains:
+        if law != "pid" and "ki" in gains:
+            view.complain("ki", f"this goes with law = pid; leave it out of law = {law}")
         wanted = _GAINS if law == "pid" else _GAINS[:2]
         for key in wanted:
             view.need(key, f"law = {law} with given gains needs {', '.join(wanted)}")

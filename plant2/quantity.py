@@ -17,16 +17,15 @@ from __future__ import annotations
 import functools
 import math
 import re
+import sys
 import unicodedata
 from collections.abc import Iterator
 from dataclasses import dataclass
 from fractions import Fraction
-from typing import TYPE_CHECKING, Any
+from types import ModuleType
+from typing import Any, cast
 
 from plant2.errors import QuantityError
-
-if TYPE_CHECKING:
-    import pint
 
 MAX_UNIT_CHARACTERS = 40
 """Longest unit text that is looked at."""
@@ -382,17 +381,27 @@ def _root(unit: str) -> tuple[Fraction, dict[str, Any]] | None:
 
 
 @functools.lru_cache(maxsize=1)
-def _registry() -> pint.UnitRegistry[Any]:
+def _registry() -> Any:
     """Our own short list of units: the full list takes a fifth of a second and knows too much."""
-    import pint
-
-    registry: pint.UnitRegistry[Any] = pint.UnitRegistry(
-        None, cache_folder=None, non_int_type=Fraction
-    )
+    pint = _pint_alone()
+    registry = pint.UnitRegistry(None, cache_folder=None, non_int_type=Fraction)
     for table in (_PREFIX_NAMES, _PREFIXED_UNITS, _UNPREFIXED_UNITS):
         for definition in table.values():
             registry.define(definition)
     return registry
+
+
+def _pint_alone() -> ModuleType:
+    """Import pint without scipy: pint would load it for unit choices that are never asked for."""
+    hidden = not {"pint", "scipy"} & set(sys.modules)
+    if hidden:
+        sys.modules["scipy"] = cast(Any, None)
+    try:
+        import pint
+    finally:
+        if hidden:
+            del sys.modules["scipy"]
+    return pint
 
 
 @functools.lru_cache(maxsize=1)

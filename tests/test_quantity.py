@@ -249,6 +249,24 @@ def test_factors_agree_with_the_full_list_of_pint() -> None:
     assert checked > 80
 
 
+def test_pint_is_loaded_without_scipy_and_scipy_stays_within_reach(tmp_path: Path) -> None:
+    code = (
+        "import sys\nfrom plant2.quantity import KINDS, parse_quantity\n"
+        "parse_quantity('5 mm', KINDS['length'])\n"
+        "assert 'pint' in sys.modules and 'scipy' not in sys.modules\n"
+        "import scipy\nprint(scipy.__name__)"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", code],
+        capture_output=True,
+        text=True,
+        env=dict(os.environ, PYTHONPATH=str(Path(__file__).parents[1])),
+        cwd=tmp_path,
+        check=False,
+    )
+    assert (done.stdout, done.returncode) == ("scipy\n", 0), done.stderr
+
+
 def test_radian_is_a_dimension() -> None:
     assert quantity._factor("N*m", "N*m/rad") is None
     assert quantity._factor("rad*m", "m") is None
