@@ -43,6 +43,7 @@ FLOORS: tuple[tuple[int, str], ...] = (
     (4, "bounds"),
     (4, "words"),
     (4, "simulate"),
+    (5, "cautions"),
     (5, "emit"),
     (5, "proof"),
     (5, "cores"),
@@ -54,6 +55,8 @@ FLOORS: tuple[tuple[int, str], ...] = (
     (6, "rehearse"),
     (6, "compare"),
     (6, "second_opinion"),
+    (7, "present"),
+    (7, "firmware"),
     (7, "report"),
     (8, "cli"),
     (8, "__main__"),
@@ -74,7 +77,7 @@ OWNERS: dict[str, tuple[str, ...]] = {
     "subprocess": ("rehearse",),
     "matplotlib": ("report",),
     "typer": ("cli",),
-    "rich": ("cli",),
+    "rich": ("cli", "present"),
 }
 """Who may import a library that has an owner; the longest name that fits counts."""
 
@@ -220,8 +223,7 @@ def named_exceptions(source: Source) -> Iterator[str]:
 
 
 def plain_facts(source: Source) -> Iterator[str]:
-    """A dataclass is frozen, slotted and keyword-only."""
-    wanted = {"frozen", "slots", "kw_only"}
+    """A dataclass is frozen, slotted and keyword-only; a private one may be a working record."""
     for node in ast.walk(source.tree):
         if not isinstance(node, ast.ClassDef):
             continue
@@ -237,6 +239,7 @@ def plain_facts(source: Source) -> Iterator[str]:
                 for word in (call.keywords if call else [])
                 if isinstance(word.value, ast.Constant) and word.value.value is True
             }
+            wanted = {"slots"} if node.name.startswith("_") else {"frozen", "slots", "kw_only"}
             for missing in sorted(wanted - given):
                 yield at(source, node, f"dataclass {node.name} without {missing}=True")
 
@@ -287,7 +290,10 @@ def is_real_valued(annotation: ast.expr | None) -> bool:
     if annotation is None:
         return False
     text = ast.unparse(annotation)
-    return bool(re.search(r"\b(float|complex|float64|complex128|floating)\b", text))
+    # What a callback is handed is told in words.
+    return "Callable" not in text and bool(
+        re.search(r"\b(float|complex|float64|complex128|floating)\b", text)
+    )
 
 
 def documented_parameters(
@@ -489,6 +495,7 @@ OFFENCES: tuple[tuple[Rule, str, str, str], ...] = (
     (named_exceptions, "plant", "try:\n    pass\nexcept:\n    pass", "bare except"),
     (plain_facts, "plant", "@dataclass\nclass A:\n    x: int", "without frozen"),
     (plain_facts, "plant", "@dataclass(frozen=True, slots=True)\nclass A: ...", "without kw_only"),
+    (plain_facts, "plant", "@dataclass\nclass _A:\n    x: int", "_A without slots"),
     (plain_facts, "plant", "@dataclass(frozen=False, slots=True, kw_only=True)\nclass A: ...", ""),
     (finished, "plant", "def f():\n    raise NotImplementedError", "NotImplementedError"),
     (documented, "plant", "x = 1", "no docstring at the head"),
@@ -668,7 +675,7 @@ def test_planted_text_offence_is_found(line: str) -> None:
 def modules_after(code: str, cwd: Path) -> set[str]:
     """Top-level names in sys.modules of a fresh interpreter after `code` ran well."""
     program = (
-        f"{code}\nimport json, sys\n"
+        f"import sys\nsys.path.insert(0, {str(ROOT)!r})\n{code}\nimport json, sys\n"
         "names = sorted({name.split('.')[0] for name in sys.modules})\n"
         "print('\\n' + json.dumps(names))"
     )
