@@ -1946,5 +1946,5 @@ peak_sensitivity = 2.0
 # limit_cycle = "3 count"
 # rms_current = "0.7 A"
 # update_time = "18 us"
-load = "40 %"
+# load = "40 %"
 """

@@ -12,6 +12,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from test_loopfile import FULL, PLAIN, ROTARY
 
+from plant2 import loopfile
 from plant2.errors import LoopFileError
 from plant2.loopfile import Loop, load_loop, loop_from_text
 
@@ -90,7 +91,8 @@ def override_texts(draw: st.DrawFn) -> str:
         "7",
         "",
     ]
-    path = ".".join(draw(st.lists(st.sampled_from(parts), max_size=4)))
+    loose = st.lists(st.sampled_from(parts), max_size=4).map(".".join)
+    path = draw(loose | st.sampled_from(loopfile._known_paths()))
     return path + draw(st.sampled_from(["=", " = ", ""])) + draw(st.sampled_from(VALUES))
 
 
