@@ -307,7 +307,7 @@ def documented_parameters(
     for name, annotation in parameters.items():
         if name not in entries:
             yield at(source, node, f"{title}: parameter {name} is not described")
-        elif is_real_valued(annotation) and not re.search(r"\[[^\]]+\]", entries[name]):
+        elif is_real_valued(annotation) and not re.search(r"\[[^\]]+\]|`unit`", entries[name]):
             yield at(source, node, f"{title}: parameter {name} has no [unit]")
 
 
