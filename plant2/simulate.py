@@ -699,6 +699,11 @@ class Record:
         tuple of two arrays of float, shape (m,)
             Times and positions. [s; m or rad]
 
+        Raises
+        ------
+        OutOfRangeError
+            If there is no such lane.
+
         Notes
         -----
         Between the nodes the motion is smooth.
@@ -1033,7 +1038,7 @@ def _mechanism(world: _World) -> _Mechanism:
     )
 
 
-@dataclass(slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class _Mass:
     """One lane's main mass on its way through a piece."""
 
@@ -1053,6 +1058,7 @@ class _Event:
     after: Real  # (n,)
     force: float
     held: bool
+    impact: bool
 
 
 def _allowed(mechanism: _Mechanism, side: float) -> tuple[float, float]:
@@ -1062,17 +1068,20 @@ def _allowed(mechanism: _Mechanism, side: float) -> tuple[float, float]:
     return low, high
 
 
-def _settle_down(mechanism: _Mechanism, mass: _Mass, u: Real, force: Real) -> None:
+def _settle_down(mechanism: _Mechanism, mass: _Mass, u: Real, force: Real) -> _Mass:
     """A mass whose velocity has just become 0: held, or off to where it is pushed."""
     push = float(mechanism.push.at(mass.state, u, force)[0])
     margin = float(mechanism.margin(mass.state, u, force)[0])
     low, high = _allowed(mechanism, mass.side)
-    mass.held = low - margin <= push <= high + margin and low < high
-    if mass.held:
-        mass.direction = 0.0
-    else:
-        mass.side = 0.0
-        mass.direction = math.copysign(1.0, push) if mechanism.friction > 0.0 else 0.0
+    if low - margin <= push <= high + margin and low < high:
+        return replace(mass, held=True, direction=0.0)
+    return _let_go(mechanism, mass, push)
+
+
+def _let_go(mechanism: _Mechanism, mass: _Mass, push: float) -> _Mass:
+    """A mass at rest that is pushed off; without friction its direction is nobody's business."""
+    direction = math.copysign(1.0, push) if mechanism.friction > 0.0 else 0.0
+    return replace(mass, held=False, direction=direction, side=0.0)
 
 
 def _leaving(
@@ -1175,7 +1184,7 @@ def _stopping(
 
 def _through_piece(
     mechanism: _Mechanism, mass: _Mass, effort: float, force: float, span_s: float, piece: int
-) -> list[_Event]:
+) -> tuple[_Mass, list[_Event]]:
     """Carry one mass through a piece, event by event."""
     u, constant = np.array([effort]), np.array([force])
     events: list[_Event] = []
@@ -1184,7 +1193,7 @@ def _through_piece(
     for _ in range(_MOST_EVENTS):
         left_s = span_s - now_s
         if left_s <= 0.0:
-            return events
+            return mass, events
         acting = constant - mechanism.friction * mass.direction
         halves = resting if mass.held else moving
         if mass.held:
@@ -1192,29 +1201,27 @@ def _through_piece(
         else:
             found = _stopping(mechanism, halves, mass, u, acting, left_s)
         if found is None:
-            mass.state = halves.advance(mass.state, u, acting, np.array([left_s]))
-            return events
-        theta, state, sign = found
+            end = halves.advance(mass.state, u, acting, np.array([left_s]))
+            return replace(mass, state=end), events
+        theta, before, sign = found
         now_s += theta
-        before = state[0].copy()
-        mass.state = state
         if mass.held:
-            mass.held, mass.side = False, 0.0
-            mass.direction = sign if mechanism.friction > 0.0 else 0.0
+            mass = _let_go(mechanism, replace(mass, state=before), sign)
         else:
-            mass.state[0, mechanism.at_velocity] = 0.0
+            after = before.copy()
+            after[0, mechanism.at_velocity] = 0.0
             if sign != 0.0:
-                mass.side = sign
-                mass.state[0, mechanism.at_position] = sign * mechanism.travel
-            _settle_down(mechanism, mass, u, constant)
+                after[0, mechanism.at_position] = sign * mechanism.travel
+            mass = _settle_down(mechanism, replace(mass, state=after, side=sign), u, constant)
         events.append(
             _Event(
                 piece=piece,
                 after_s=now_s,
-                before=before,
-                after=mass.state[0].copy(),
+                before=before[0],
+                after=mass.state[0],
                 force=force - mechanism.friction * mass.direction,
                 held=mass.held,
+                impact=sign != 0.0 and not np.array_equal(before, mass.state),
             )
         )
     raise OutOfRangeError(
@@ -1344,7 +1351,7 @@ def _run_with_events(
                     direction=float(direction[lane]),
                     side=float(side[lane]),
                 )
-                found = _through_piece(
+                mass, found = _through_piece(
                     mechanism,
                     mass,
                     float(effort[lane]),
@@ -1357,9 +1364,7 @@ def _run_with_events(
                     after[:, lane] = mass.state[0]
                     held[lane], direction[lane] = mass.held, mass.direction
                     side[lane] = mass.side
-                    touched[lane] |= any(
-                        abs(e.after[mechanism.at_position]) >= mechanism.travel for e in found
-                    )
+                    touched[lane] |= any(e.impact for e in found)
             state = after
             piece += 1
             states[piece] = state
@@ -1568,15 +1573,15 @@ def _first_moment(
         v = float(mechanism.velocity.at(mass.state, np.zeros(1), np.zeros(1))[0])
         if abs(x) > world.travel:
             raise OutOfRangeError(
-                "start", x, "m", "lies beyond the end stop", "start within the travel"
+                "start", x, "m or rad", "lies beyond the end stop", "start within the travel"
             )
         if abs(x) == world.travel:
-            mass.side = math.copysign(1.0, x)
+            mass = replace(mass, side=math.copysign(1.0, x))
         if v == 0.0:
-            _settle_down(mechanism, mass, efforts[lane : lane + 1], world.force[lane : lane + 1])
+            here = slice(lane, lane + 1)
+            mass = _settle_down(mechanism, mass, efforts[here], world.force[here])
         else:
-            mass.side = 0.0
-            mass.direction = math.copysign(1.0, v) if world.friction > 0.0 else 0.0
+            mass = _let_go(mechanism, mass, v)
         held[lane], direction[lane], side[lane] = mass.held, mass.direction, mass.side
     return _Moment(
         number=0,
@@ -1636,7 +1641,7 @@ def simulate(
         Number of last samples whose words are kept; None keeps all.
     progress : callable or None
         Called with the fraction that is done, from time to time; begins anew where lanes that
-        touched a stop are run again.
+        touched a stop are run again. [-]
 
     Returns
     -------
@@ -1894,7 +1899,7 @@ def checked_step(
     samples : int
         Horizon.
     progress : callable or None
-        Called with the fraction that is done, from time to time.
+        Called with the fraction that is done, from time to time. [-]
 
     Returns
     -------
