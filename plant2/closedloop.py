@@ -323,7 +323,9 @@ def _loop_gain_and_slope(loop: ClosedLoop, delta: Complex) -> tuple[Complex, Com
     dn = np.polyval(np.polyder(num), delta) if len(num) > 1 else np.zeros_like(delta)
     dd = np.polyval(np.polyder(den), delta) if len(den) > 1 else np.zeros_like(delta)
     dc = (dn - c * dd) / d
-    return loop.scale * c * g, loop.scale * (c * dg + dc * g)
+    value: Complex = np.asarray(loop.scale * c * g, dtype=complex)
+    slope: Complex = np.asarray(loop.scale * (c * dg + dc * g), dtype=complex)
+    return value, slope
 
 
 def poles_delta(loop: ClosedLoop, *, gain: float = 1.0, polish: bool = True) -> Complex:

@@ -654,7 +654,7 @@ def transfer(controller: Equations | WordController) -> ControllerTransfer:
             for e in controller.update
         ]
     else:
-        bits = {name: 0 for name in controller.inputs}
+        bits = dict.fromkeys(controller.inputs, 0)
         bits.update({e.name: e.frac_bits for e in controller.update})
         rows = [
             (

@@ -591,7 +591,7 @@ def _reset(
                     signal="position_count",
                     word=-word,
                     lift=lift + trailing,
-                    name="kr_less_kp",
+                    name="kp_less_kr",
                     word_frac_bits=frac,
                 )
             )
@@ -620,7 +620,7 @@ def _reset(
                     signal="position_count",
                     word=-word,
                     lift=sum_frac - frac,
-                    name="kr_less_kp",
+                    name="kp_less_kr",
                     word_frac_bits=frac,
                 )
             )

@@ -186,7 +186,7 @@ def test_integral_does_not_wind_up() -> None:
     """Held against the limit for a thousand samples, the output leaves it soon after the error
     turns; an integral that had run into its own limit would stay there twice as long."""
     for bits in (16, 32):
-        task, _, words = built("pid", bits)
+        words = built("pid", bits)[2]
         machine = IntegerController(words.controller)
         machine.reset(0, 0)
         for _ in range(1000):
@@ -198,7 +198,6 @@ def test_integral_does_not_wind_up() -> None:
         for _ in range(60):
             machine.update(0, 2000)
         assert machine.limited() == 0
-        del task
 
 
 def test_small_gain_is_told_not_lost() -> None:
@@ -209,11 +208,10 @@ def test_small_gain_is_told_not_lost() -> None:
 
 
 def test_words_are_the_nearest() -> None:
-    task, gains, words = built("pd", 32)
+    words = built("pd", 32)[2]
     for e in words.errors:
         assert abs(Fraction(e.stored) - Fraction(e.wanted)) <= Fraction(e.step) / 2
         assert abs(e.stored / e.wanted - 1) < 1e-8
-    del task, gains
 
 
 @pytest.mark.parametrize(
@@ -287,14 +285,19 @@ def test_no_word_leaves_its_range(
         words = words_of(task, gains, bits)
     except DesignError:
         return
-    _hostile(words.controller, seed)
+    low = task.loop.actuator.zero_code - task.loop.actuator.limit_code
+    high = task.loop.actuator.zero_code + task.loop.actuator.limit_code
+    codes = _hostile(words.controller, seed)
+    assert (min(codes), max(codes)) == (low, high)
 
 
-def _hostile(controller: WordController, seed: int) -> None:
+def _hostile(controller: WordController, seed: int) -> list[int]:
+    """Codes under extremes and noise; the machine itself refuses a word out of its range."""
     machine = IntegerController(controller)
     top = 1 << (controller.word_bits - 1)
     machine.reset(0, 0)
     value = seed
+    codes = []
     for k in range(400):
         value = (value * 6364136223846793005 + 1442695040888963407) % 2**64
         if k % 50 < 20:
@@ -304,4 +307,5 @@ def _hostile(controller: WordController, seed: int) -> None:
             r = (value >> 33) % (2 * top) - top
             y = (value >> 13) % (2 * top) - top
             a = (value >> 3) % (2 * top) - top if k % 3 == 0 else 0
-        machine.update(r, y, a)
+        codes.append(machine.update(r, y, a))
+    return codes
