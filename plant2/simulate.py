@@ -51,6 +51,7 @@ _OFFSETS = 16
 _CHUNK = 2048
 _MOST_EVENTS = 64
 _MOST_NUMBERS = 1 << 23  # of a motion that is kept; longer ones simulate themselves again
+_RECENT = 4  # stretches that were simulated again and may be asked for once more
 _MOST_KEPT = 1 << 25  # words of a checked step
 
 _Operation = tuple[Callable[..., Any], tuple[Any, ...]]
@@ -1103,7 +1104,7 @@ def _leaving(
     for begin_s, begin, stop_s, stop in legs:
         push = float(mechanism.push.at(stop, u, force)[0])
         for sign, level in ((1.0, high), (-1.0, -low)):
-            # Just beyond the level, so that the mass is truly accelerated from there.
+            # Beyond the level by more than rounding: from there the mass is truly accelerated.
             beyond = sign * push - level - float(margin[0])
             if beyond > 0.0:
                 theta, state = halves.until(
@@ -1115,7 +1116,10 @@ def _leaving(
                     -sign * (level + margin),
                     np.array([-sign]),
                 )
-                return begin_s + float(theta[0]), state, sign
+                # One step of the finest level more: now the push is beyond, and stays there.
+                last = halves.steps_s[-1:]
+                state = halves.advance(state, u, force, last)
+                return begin_s + float(theta[0] + last[0]), state, sign
     return None
 
 
@@ -1487,6 +1491,16 @@ def _run(
     peak = np.zeros(lanes, dtype=np.int64)
     saturated, touched, beyond = (np.zeros(lanes, dtype=bool) for _ in range(3))
     parts: list[list[Part]] = []
+    # Lanes of one run ask for the same stretches, one after the other.
+    recent: dict[int, _Stretch] = {}
+
+    def again(moment: _Moment, count: int) -> _Stretch:
+        if moment.number not in recent:
+            while len(recent) >= _RECENT:
+                del recent[next(iter(recent))]
+            recent[moment.number] = runner(world, digital, moment, count)[0]
+        return recent[moment.number]
+
     moment = start
     while moment.number < samples:
         count = min(_CHUNK, samples - moment.number)
@@ -1512,7 +1526,7 @@ def _run(
             ) -> Trajectory:
                 if trajectory is not None:
                     return trajectory
-                return runner(world, digital, moment, count)[0].trajectories[number]
+                return again(moment, count).trajectories[number]
 
             part = part_of(trajectory, load)
             parts[number].append(part)

@@ -1193,21 +1193,21 @@ def test_long_runs_give_the_same_in_chunks(monkeypatch: pytest.MonkeyPatch) -> N
     """Parts that simulate themselves again are the parts that were."""
     for friction in ("0 N", "0.05 N"):
         loop = loop_of(friction=friction)
-        whole = checked_step(loop, plant_of(loop), focus_stage(), samples=400)
+        whole = checked_step(loop, plant_of(loop), focus_stage(), samples=240)
         with monkeypatch.context() as patch:
             patch.setattr(simulate_module, "_CHUNK", 37)
             patch.setattr(simulate_module, "_MOST_NUMBERS", 0)
             patch.setattr(simulate_module, "_MOST_KEPT", 32 * 50)
             done: list[float] = []
             pieced = checked_step(
-                loop, plant_of(loop), focus_stage(), samples=400, progress=done.append
+                loop, plant_of(loop), focus_stage(), samples=240, progress=done.append
             )
-            assert len(done) == 11 and done == sorted(done) and done[-1] == 1.0
+            assert len(done) == 7 and done == sorted(done) and done[-1] == 1.0
             record = pieced.record
-            assert record.first_kept == 350 and record.codes.shape == (50, 32)
-            assert np.array_equal(record.codes, whole.record.codes[350:])
-            assert np.array_equal(record.counts, whole.record.counts[350:])
-            assert np.array_equal(record.limited, whole.record.limited[350:])
+            assert record.first_kept == 190 and record.codes.shape == (50, 32)
+            assert np.array_equal(record.codes, whole.record.codes[190:])
+            assert np.array_equal(record.counts, whole.record.counts[190:])
+            assert np.array_equal(record.limited, whole.record.limited[190:])
             assert np.array_equal(record.peak_code, whole.record.peak_code)
             for lane in (0, 31):
                 for left, right in zip(record.motion(lane), whole.record.motion(lane), strict=True):
@@ -1219,6 +1219,17 @@ def test_long_runs_give_the_same_in_chunks(monkeypatch: pytest.MonkeyPatch) -> N
                 abs=1e-11 if name == "overshoot_percent" else 1e-17,
                 nan_ok=True,
             ), name
+
+
+def test_friction_leaves_the_error_that_the_gain_allows() -> None:
+    """Stuck within friction / (k + kp), with a current loop whose lag lets it creep off late."""
+    loop = loop_of(friction="0.05 N", drive=CURRENT + '\nbandwidth = "8 kHz"')
+    result = checked_step(loop, plant_of(loop), focus_stage(), samples=300)
+    step, code = loop.sensor.step, 1.5 * 9.5 / 2048
+    stiff = 2400.0 + 1.294 * code / step
+    # One count and one code are not resolved either.
+    assert 0.5 * 0.05 / stiff < result.final_error < (0.05 + code) / stiff + step
+    assert result.rest_peak_to_peak_count == 0.0
 
 
 def test_bad_runs_are_refused() -> None:
