@@ -35,6 +35,7 @@ from plant2.equations import (
     WordTerm,
     partial_sum_range,
     signal_range,
+    verify_ranges,
 )
 from plant2.errors import OutOfRangeError, Plant2Error
 from plant2.simulate import IntegerController
@@ -778,7 +779,8 @@ def render(
     Raises
     ------
     OutOfRangeError
-        If a number does not fit its C type, a name is none, or the lists do not fit together.
+        If a number does not fit its C type, a name is none, the lists do not fit together, or a
+        range does not hold.
 
     Notes
     -----
@@ -851,6 +853,7 @@ def render(
         "state_wide": tuple(s.wide for s in controller.state),
         "row_count": number - 1,
     }
+    verify_ranges(controller)
     environment = _environment(controller)
     files = {
         f"{name}{ending}": environment.get_template(template).render(view)

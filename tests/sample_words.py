@@ -38,7 +38,7 @@ def _clip(name: str, meaning: str, unit: str, source: str, limit: Range) -> Word
     return WordEquation(name=name, meaning=meaning, unit=unit, terms=(_plain(source),), limit=limit)
 
 
-def _with_ranges(
+def with_ranges(
     equations: tuple[WordEquation, ...], inputs: tuple[str, ...], word_bits: int
 ) -> tuple[WordEquation, ...]:
     """Fill in low, high, sum_low, sum_high; a signal read before it is made needs a limit."""
@@ -134,7 +134,7 @@ def _controller(
     resting: tuple[WordEquation, ...],
     resets: Mapping[str, str | None],
 ) -> WordController:
-    reset = _with_ranges(reset, ("position", "output"), word_bits)
+    reset = with_ranges(reset, ("position", "output"), word_bits)
     started = {e.name: e for e in reset}
     # A held word takes its range from the reset equation that writes it.
     update = tuple(
@@ -149,7 +149,7 @@ def _controller(
         )
         for e in update
     )
-    update = _with_ranges(update, ("reference", "position", "added"), word_bits)
+    update = with_ranges(update, ("reference", "position", "added"), word_bits)
     controller = WordController(
         name=name,
         word_bits=word_bits,
@@ -159,7 +159,7 @@ def _controller(
         output="output_code",
         excess="excess",
         reset=reset,
-        resting=_with_ranges(resting, ("position",), word_bits),
+        resting=with_ranges(resting, ("position",), word_bits),
         state=_state(update, resets, ("excess",)),
     )
     verify_ranges(controller)
