@@ -716,6 +716,26 @@ def test_counts_are_clipped_to_the_converter() -> None:
     assert count_of(loop, [0.5 * step, -0.5 * step, 1.5 * step]).tolist() == [1, 0, 2]
 
 
+def test_counts_within_a_run_round_like_those_outside() -> None:
+    """A plant that stays at 0, and noise that puts the sensor onto ties and beside them."""
+    loop = loop_of()
+    step = loop.sensor.step
+    levels = np.array([0.5, 0.49995, 0.50005, -0.5, -0.49995, -0.50005, 1.5, 2.49999, -7.5, 9e4])
+    record = simulate(
+        loop,
+        plant_of(loop),
+        open_loop(),
+        samples=levels.size,
+        reference=0,
+        start=[0.0],
+        output=[0],
+        added=0,
+        noise=levels[:, np.newaxis] * step,
+    )
+    assert record.counts[:, 0].tolist() == [1, 0, 1, 0, 0, -1, 2, 2, -7, 8191]
+    assert record.counts[:, 0].tolist() == count_of(loop, levels * step).tolist()
+
+
 def open_loop() -> WordController:
     """A controller that passes on what is added: any sequence of codes, whatever it measures."""
     update = (
