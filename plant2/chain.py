@@ -44,8 +44,7 @@ from plant2.equations import WordController, transfer
 from plant2.errors import DesignError
 from plant2.loopfile import Loop
 from plant2.plant import holding_effort
-from plant2.response import StepFigures, Trajectory, step_figures
-from plant2.sampled import propagate
+from plant2.response import StepFigures, Trajectory, step_figures, trajectory_of_samples
 from plant2.simulate import CheckedStep, checked_step
 from plant2.words import WordError, Words, words_of
 
@@ -219,35 +218,11 @@ def linear_response(task: Task, closed: ClosedLoop, samples: int) -> tuple[Traje
     """
     states, effort = linear_step(closed, samples)
     sampled = closed.sampled
-    period, whole, fraction = sampled.period_s, sampled.whole_delay, sampled.fraction
-
-    def held(lag: int) -> Real:
-        out = np.zeros(samples)
-        if lag < samples:
-            out[lag:] = effort[: samples - lag]
-        return out
-
-    late, early = held(whole), held(whole + 1)
-    if fraction == 0.0:
-        times: Real = np.asarray(period * np.arange(samples), dtype=np.float64)
-        nodes, inputs = states, late[:-1]
-    else:
-        psi, gamma, _ = propagate(sampled.space, fraction * period)
-        times = np.empty(2 * samples)
-        times[0::2] = period * np.arange(samples)
-        times[1::2] = times[0::2] + fraction * period
-        nodes = np.empty((2 * samples, states.shape[1]))
-        nodes[0::2] = states
-        nodes[1::2] = states + states @ psi.T + early[:, None] * gamma
-        inputs = np.empty(2 * samples)
-        inputs[0::2], inputs[1::2] = early, late
-        inputs = inputs[:-1]
-    trajectory = Trajectory(
-        space=sampled.space,
-        times_s=times,
-        states=nodes[:, None, :],
-        inputs=inputs[:, None],
-        forces=np.zeros((len(inputs), 1)),
+    # at rest before: the outputs that came earlier than the first sample are 0
+    earlier = np.zeros(sampled.whole_delay + 1)
+    inputs = np.concatenate([earlier, effort])[: samples + sampled.whole_delay]
+    trajectory = trajectory_of_samples(
+        sampled, states=states[:, None, :], inputs=inputs[:, None], forces=np.zeros(1)
     )
     return trajectory, effort
 

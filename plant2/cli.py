@@ -38,6 +38,9 @@ app = typer.Typer(
     epilog="Exit status: 0 all met, 1 a requirement missed, 2 bad input, 3 a tool is missing.",
 )
 
+DEFECT = "this loop file meets a defect of plant2, not of yours; nothing was checked"
+"""What is said when an error was not foreseen; tests look for it."""
+
 LoopArgument = Annotated[Path, typer.Argument(metavar="LOOP", help="The loop file.")]
 SetOption = Annotated[
     list[str] | None,
@@ -79,6 +82,10 @@ def _complaints() -> Iterator[None]:
         raise typer.Exit(2) from None
     except OSError as fault:
         _complain(f"{fault.filename or 'file'}: {(fault.strerror or 'cannot be used').lower()}")
+        raise typer.Exit(2) from None
+    except (ArithmeticError, ValueError, LookupError, TypeError, AssertionError) as fault:
+        # Not foreseen. One line, and never an exit status that a script could take for a verdict.
+        _complain(f"{DEFECT} ({type(fault).__name__}: {fault})")
         raise typer.Exit(2) from None
 
 

@@ -168,7 +168,8 @@ class WordTerm:
     name : str or None
         Name of the word.
     word_frac_bits : int
-        Fraction bits of the word; 0 without one.
+        Fraction bits of the word; without one the power of two that the term is divided by, 0 for
+        a plain signal.
 
     Notes
     -----

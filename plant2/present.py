@@ -9,6 +9,7 @@ Rules of this file:
 
 from __future__ import annotations
 
+import decimal
 import math
 from collections.abc import Mapping
 from pathlib import Path
@@ -474,17 +475,27 @@ def verdicts(console: Console, report: Report) -> None:
         style = {True: "green", False: "red", None: "yellow"}[r.met]
         table.add_row(f"  {NAMES.get(r.name, r.name)}", value, bound, f"[{style}]{r.verdict}[/]")
     _show(console, table)
+    reasons: dict[str, list[str]] = {}
     for r in report.requirements:
         if r.reason:
-            console.print(
-                f"  {NAMES.get(r.name, r.name)}: {r.reason}", markup=False, soft_wrap=True
-            )
+            reasons.setdefault(r.reason, []).append(NAMES.get(r.name, r.name))
+    for reason, names in reasons.items():
+        console.print(f"  {'; '.join(names)}: {reason}", markup=False, soft_wrap=True)
     nearest(console, report)
     console.print(
         f"verdict: {'met' if report.met else 'missed'}",
         style="bold green" if report.met else "bold red",
         markup=False,
     )
+
+
+def _inward(value: float | None, below: bool) -> str:
+    """Six digits, rounded to the side that works, so that the printed line can be used."""
+    context = decimal.Context(
+        prec=6, rounding=decimal.ROUND_FLOOR if below else decimal.ROUND_CEILING
+    )
+    rounded = context.create_decimal_from_float(math.nan if value is None else value)
+    return f"{rounded.normalize():f}"
 
 
 def nearest(console: Console, report: Report) -> None:
@@ -511,15 +522,18 @@ def nearest(console: Console, report: Report) -> None:
                 soft_wrap=True,
             )
         return
+    found = near.natural_frequency_hz if near.crossover_hz is None else near.crossover_hz
+    below = found is None or near.fails_at_hz > found
+    wanted = report.evidence.loop.aim.bandwidth_hz is not None
     if near.crossover_hz is not None:
-        line = f'crossover = "{near.crossover_hz:.6g} Hz"'
-    elif report.evidence.loop.aim.bandwidth_hz is not None and near.bandwidth_hz is not None:
+        line = f'crossover = "{_inward(near.crossover_hz, below)} Hz"'
+    elif wanted and near.bandwidth_hz is not None:
         line = (
-            f'bandwidth = "{near.bandwidth_hz:.6g} Hz" '
+            f'bandwidth = "{_inward(near.bandwidth_hz, below)} Hz" '
             f"(natural frequency {near.natural_frequency_hz:.6g} Hz)"
         )
     else:
-        line = f'natural_frequency = "{near.natural_frequency_hz:.6g} Hz"'
+        line = f'natural_frequency = "{_inward(near.natural_frequency_hz, below)} Hz"'
     console.print(f"  nearest target that works: {line}", markup=False, soft_wrap=True)
     console.print(
         f"  one step of 0.1 % beyond, at {near.fails_at_hz:.6g} Hz: {near.reason}",

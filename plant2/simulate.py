@@ -1892,6 +1892,10 @@ class CheckedStep:
     record: Record
 
 
+def _above_rounding(percent: float) -> float:
+    return percent if percent > 1e-9 else 0.0
+
+
 def checked_step(
     loop: Loop,
     plant: Plant,
@@ -1964,7 +1968,8 @@ def checked_step(
     return CheckedStep(
         size=size,
         band=band,
-        overshoot_percent=float(figures.overshoot_percent.max()),
+        # what rounding alone leaves of a motion that stops short is no overshoot
+        overshoot_percent=_above_rounding(float(figures.overshoot_percent.max())),
         settling_time_s=float(figures.settling_time_s.max()),
         rise_time_s=float(figures.rise_time_s.max()),
         peak_code=int(record.peak_code.max()),
