@@ -308,7 +308,6 @@ class _Step:
     high: int | None
     reason: str
     unread: bool
-    short: bool
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -515,7 +514,6 @@ def _step(e: WordEquation, names: _Names, *, read: set[str]) -> _Step:
         high=None if high is None or high >= most else high,
         reason=("within its limit" if e.limit is not None else f"proven: {e.low} .. {e.high}"),
         unread=e.name not in read,
-        short=len(terms) + bool(e.constant) <= 2,
     )
 
 
@@ -715,10 +713,35 @@ def _environment(controller: WordController) -> jinja2.Environment:
         body = "\n".join(lines(text, indent) for text in texts)
         return f"{start}/*\n{body}\n{start} */"
 
-    def beside(start: str, end: str, indent: int) -> str:
-        """Two pieces of code on one line, or on two where one is too long."""
-        one = f"{start} {end}"
-        return one if len(one) <= LINE else f"{start}\n{' ' * indent}{end}"
+    def statement(lines: str, start: str) -> str:
+        """``start = lines;``, short sums on one line, long ones a term on each."""
+        pieces = lines.strip("\n").split("\n")
+        one = f"    {start} = {' '.join(pieces)};"
+        if len(pieces) <= 2 and len(one) <= LINE:
+            return one
+        head = f"    {start} = {pieces[0]}"
+        if len(head) >= LINE:
+            head = f"    {start} =\n        {pieces[0]}"
+        return "\n        ".join([head, *pieces[1:]]) + ";"
+
+    def beside(code: str, text: str) -> str:
+        """A line of code with a remark behind it, or above it where the line grows too long."""
+        one = f"{code} /* {comment_text(text)} */"
+        indent = len(code) - len(code.lstrip())
+        return one if len(one) <= LINE else f"{remark(text, indent)}\n{code}"
+
+    def initialiser(words: Sequence[str], indent: int) -> str:
+        """A braced list of literals on as many lines as it needs."""
+        start = " " * indent
+        body = "{" + ", ".join(words) + "},"
+        return textwrap.fill(
+            body,
+            width=LINE,
+            initial_indent=start,
+            subsequent_indent=start + "    ",
+            break_long_words=False,
+            break_on_hyphens=False,
+        )
 
     def tight(text: str) -> str:
         return text.rstrip("\n")
@@ -748,6 +771,8 @@ def _environment(controller: WordController) -> jinja2.Environment:
         remark=remark,
         remarks=remarks,
         beside=beside,
+        statement=statement,
+        initialiser=initialiser,
         tight=tight,
         columns=columns,
         text=comment_text,
@@ -987,35 +1012,173 @@ class _Searcher:
         2^shift: 0 is an exact tie. Sums of an equation may all be multiples of a power of two, so
         that the nearest ones to a tie are further off than 1. A point is taken only where the
         value next to it can be told from outside, and rather where every coefficient of the
-        equation has something to multiply. Where no point of the nearest kind is found, the
+        equation that is one off would be seen. Where no point of the nearest kind is found, the
         nearest of all that were tried is.
         """
-        grain = 1 << e.shift
+        modulus = 1 << e.shift
+        grain = modulus
         for factor in [t.factor for t in e.terms] + [1 for n in (e.held, e.rest) if n is not None]:
             grain = math.gcd(grain, factor)
         offset = (e.constant + e.rounding) % grain - (grain if below else 0)
-        modulus = 1 << e.shift
+        sizes = {name: max(-low, high) for name, (low, high) in self.ranges.items()}
+        sizes |= {x.name: max(-x.low, x.high) for x in self.equations}
+        # No coefficient that is one off changes the sum by more.
+        reach = min([modulus, *(sizes[t.signal] << t.lift for t in e.terms if t.word is not None)])
         best: tuple[bool, int, dict[str, int]] | None = None
         few = self.every()
-        points = iter(few) if few else (self.draw() for _ in range(80))
-        for point in points:
-            # Where every point is tried there is nothing to solve.
-            for candidate in [point] if few else [point, *self.solutions(e, point, offset)]:
-                here = self.run(candidate)
-                past = (here.sums[e.name] + e.rounding) % modulus
+        for number, point in enumerate(few or (self.draw() for _ in range(60))):
+            candidates = [point]
+            if not few:
+                # Where every point is tried there is nothing to solve.
+                moves = self.moves(e, point)
+                candidates += self.solved_by_one(e, point, offset, moves)
+                if number >= 4:
+                    candidates += self.solved_by_two(e, point, offset, moves, below)
+            for candidate in candidates:
+                past = (self.run(candidate).sums[e.name] + e.rounding) % modulus
                 distance = past - modulus if below else past
                 if best is not None and not best[0] and abs(distance) >= best[1]:
                     continue
-                idle = not self.busy(e, candidate)
-                if best is not None and (idle, abs(distance)) >= best[:2]:
+                weak = abs(distance) >= reach or abs(distance) >= self.least_effect(e, candidate)
+                if best is not None and (weak, abs(distance)) >= best[:2]:
                     continue
-                moved = {e.name: -distance if below else -distance - 1}
-                if self.run(candidate, rounding=moved).after == here.after:
+                seen = self.shown(e, candidate, -distance if below else -distance - 1)
+                if seen is None:
                     continue
-                best = (idle, abs(distance), candidate)
-                if not idle and distance == offset:
-                    return candidate, distance
+                best = (weak, abs(distance), seen)
+                if not weak and distance == offset:
+                    return seen, distance
         return (None, 0) if best is None else (best[2], -best[1] if below else best[1])
+
+    def shown(self, e: WordEquation, point: dict[str, int], nudge: int) -> dict[str, int] | None:
+        """The point, or one with the same remainder, where the next value can be told from outside.
+
+        What the value changes may be rounded away later in the list: then that later sum is moved
+        to its own edge, in steps that keep the remainder of the first.
+        """
+
+        def visible(p: dict[str, int]) -> bool:
+            return self.run(p, rounding={e.name: nudge}).after != self.run(p).after
+
+        if visible(point):
+            return point
+        here, moved = self.run(point), self.run(point, rounding={e.name: nudge})
+        for later in self.equations:
+            effect = moved.sums[later.name] - here.sums[later.name]
+            if later.name == e.name or not later.shift or not effect:
+                continue
+            modulus = 1 << later.shift
+            past = (here.sums[later.name] + later.rounding) % modulus
+            # Where the effect takes the sum over a multiple of the modulus.
+            window = 0 if effect < 0 else modulus - effect
+            for name, step, slope in self.moves(e, point):
+                keep = step * ((1 << e.shift) // math.gcd(slope, 1 << e.shift))
+                if not self.within(name, point[name] + keep):
+                    continue
+                turn = self.run({**point, name: point[name] + keep}).sums[later.name]
+                turn -= here.sums[later.name]
+                for goal in (window - past, window - past - modulus, window - past + modulus):
+                    for count in {goal // turn, -(-goal // turn)} if turn else ():
+                        other = {**point, name: point[name] + keep * count}
+                        same = self.within(name, other[name]) and not (
+                            (self.run(other).sums[e.name] - here.sums[e.name]) % (1 << e.shift)
+                        )
+                        if same and visible(other):
+                            return other
+        return None
+
+    def within(self, name: str, value: int) -> bool:
+        low, high = self.ranges[name]
+        return low <= value <= high
+
+    def moves(self, e: WordEquation, point: Mapping[str, int]) -> list[tuple[str, int, int]]:
+        """Words that move the sum: name, step and what a step adds to the sum, near the point.
+
+        Steps are 1 and 2^shift of the roundings, which pass through them without a remainder.
+        """
+        start = self.run(point).sums[e.name]
+        found = []
+        for step in sorted({1} | {1 << x.shift for x in self.equations}):
+            for name in self.ranges:
+                sign = 1 if self.within(name, point[name] + step) else -1
+                if self.within(name, point[name] + sign * step):
+                    other = {**point, name: point[name] + sign * step}
+                    slope = sign * (self.run(other).sums[e.name] - start)
+                    if slope:
+                        found.append((name, step, slope))
+        return found
+
+    def solved(
+        self, e: WordEquation, point: dict[str, int], move: tuple[str, int, int], wanted: int
+    ) -> Iterator[dict[str, int]]:
+        """Points that differ in one word; their sum should be larger by `wanted`, mod 2^shift."""
+        name, step, slope = move
+        modulus = 1 << e.shift
+        common = math.gcd(slope, modulus)
+        if wanted % common:
+            return
+        period = modulus // common
+        count = wanted // common * pow(slope // common, -1, period) % period if period > 1 else 0
+        for turns in (count, count - period):
+            if self.within(name, point[name] + turns * step):
+                yield {**point, name: point[name] + turns * step}
+
+    def solved_by_one(
+        self,
+        e: WordEquation,
+        point: dict[str, int],
+        offset: int,
+        moves: Sequence[tuple[str, int, int]],
+    ) -> Iterator[dict[str, int]]:
+        """Points that differ from the given one in one word and should meet the remainder."""
+        wanted = (offset - e.rounding - self.run(point).sums[e.name]) % (1 << e.shift)
+        for move in moves:
+            yield from self.solved(e, point, move, wanted)
+
+    def solved_by_two(
+        self,
+        e: WordEquation,
+        point: dict[str, int],
+        offset: int,
+        moves: Sequence[tuple[str, int, int]],
+        below: bool,
+    ) -> Iterator[dict[str, int]]:
+        """Points that differ in two words: an input comes nearest, another word does the rest."""
+        modulus = 1 << e.shift
+        wanted = (offset - e.rounding - self.run(point).sums[e.name]) % modulus
+        followers = [
+            move
+            for move in moves
+            if (self.ranges[move[0]][1] - self.ranges[move[0]][0]) // move[1]
+            >= modulus // math.gcd(move[2], modulus)
+        ]
+        for follower in sorted(followers, key=lambda move: math.gcd(move[2], modulus))[:1]:
+            common = math.gcd(follower[2], modulus)
+            for name, step, slope in moves:
+                if name == follower[0] or name not in self.inputs:
+                    continue
+                first = -((point[name] - self.ranges[name][0]) // step)
+                last = (self.ranges[name][1] - point[name]) // step
+                start = wanted - slope * first
+                if below:
+                    turn, _ = _nearest_remainder(slope, start, common, last - first)
+                else:
+                    turn, _ = _nearest_remainder(-slope, -start, common, last - first)
+                moved = {**point, name: point[name] + (first + turn) * step}
+                # Summed anew: the move may have passed through a rounding on its way.
+                left = (offset - e.rounding - self.run(moved).sums[e.name]) % modulus
+                left += -(left % common) if below else -left % common
+                yield from self.solved(e, moved, follower, left)
+
+    def least_effect(self, e: WordEquation, point: Mapping[str, int]) -> int:
+        """What the sum changes at least when one of its coefficients, or a sign, is one off."""
+        whole = self.run(point).sums[e.name]
+        effects = [1 << e.shift]
+        for t in e.terms:
+            unit = replace(t, word=None if t.word is None else t.word + 1, sign=-t.sign)
+            other = replace(e, terms=tuple(unit if x is t else x for x in e.terms))
+            effects.append(abs(self.run(point, instead=other).sums[e.name] - whole))
+        return min(effects)
 
     def every(self) -> list[dict[str, int]]:
         """All points, where there are few."""
@@ -1023,35 +1186,6 @@ class _Searcher:
             return []
         ((name, (low, high)),) = self.ranges.items()
         return [{name: v} for v in range(low, high + 1)] if high - low < 1 << 14 else []
-
-    def busy(self, e: WordEquation, point: Mapping[str, int]) -> bool:
-        """Tell whether every coefficient of the equation has something to multiply here."""
-        whole = self.run(point).sums[e.name]
-        for t in e.terms:
-            without = replace(e, terms=tuple(x for x in e.terms if x is not t))
-            if self.run(point, instead=without).sums[e.name] == whole:
-                return False
-        return True
-
-    def solutions(
-        self, e: WordEquation, point: Mapping[str, int], offset: int
-    ) -> Iterator[dict[str, int]]:
-        """Points that differ from the given one in one word and should meet the remainder."""
-        modulus = 1 << e.shift
-        start = self.run(point).sums[e.name]
-        for name, (low, high) in self.ranges.items():
-            if not low <= point[name] < high:
-                continue
-            slope = self.run({**point, name: point[name] + 1}).sums[e.name] - start
-            wanted = (offset - e.rounding - start) % modulus
-            step = slope & -slope
-            if slope == 0 or step >= modulus and wanted or wanted % min(step, modulus):
-                continue
-            period = max(modulus // step, 1)
-            delta = (wanted // step) * pow(slope // step, -1, period) % period if period > 1 else 0
-            for change in (delta, delta - period):
-                if low <= point[name] + change <= high:
-                    yield {**point, name: point[name] + change}
 
     def active(self, e: WordEquation, upper: bool) -> dict[str, int] | None:
         """A point where the limit acts, and where one that is a count off can be told from it."""
@@ -1080,6 +1214,46 @@ class _Searcher:
                         point = moved
                         break
         return None
+
+
+def _first_hit(a: int, modulus: int, low: int, high: int) -> int | None:
+    """Least x >= 0 with low <= a x mod modulus <= high; None where there is none.
+
+    Own derivation, as Euclid's algorithm: no multiple of a between low and high leaves a smaller
+    problem modulo a.
+    """
+    if low == 0:
+        return 0
+    a %= modulus
+    if 2 * a > modulus:
+        a, low, high = modulus - a, modulus - high, modulus - low
+    if a == 0:
+        return None
+    x = -(-low // a)
+    if a * x <= high:
+        return x
+    y = _first_hit(-modulus % a, a, low % a, high % a)
+    return None if y is None else -(-(low + modulus * y) // a)
+
+
+def _nearest_remainder(slope: int, start: int, modulus: int, last: int) -> tuple[int, int]:
+    """x from 0 to last with the least (start - slope x) mod modulus, and that remainder."""
+    low, high = -1, start % modulus
+    best = (0, high)
+    while high - low > 1:
+        middle = (low + high) // 2
+        # 0 <= start - slope x <= middle, as a window of slope x.
+        window = (start - middle) % modulus, start % modulus
+        if window[0] <= window[1]:
+            x = _first_hit(slope, modulus, *window)
+        else:
+            x = 0
+        if x is None or x > last:
+            low = middle
+        else:
+            high = (start - slope * x) % modulus
+            best = (x, high)
+    return best
 
 
 def _can_act(e: WordEquation, ranges: Mapping[str, tuple[int, int]], upper: bool) -> bool:

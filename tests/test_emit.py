@@ -546,6 +546,22 @@ def test_recorded_step_is_check_replay(controller: WordController) -> None:
         emit.selfcheck_vectors(controller, closed_loop=wrong)
 
 
+@given(
+    slope=st.integers(-(1 << 20), 1 << 20),
+    start=st.integers(-(1 << 20), 1 << 20),
+    bits=st.integers(0, 12),
+    last=st.integers(0, 60),
+)
+def test_nearest_remainder_is_the_least_of_all(
+    slope: int, start: int, bits: int, last: int
+) -> None:
+    modulus = 1 << bits
+    x, remainder = emit._nearest_remainder(slope, start, modulus, last)
+    every = [(start - slope * k) % modulus for k in range(last + 1)]
+    assert 0 <= x <= last
+    assert remainder == every[x] == min(every)
+
+
 def test_generator_of_the_noise_is_the_published_one() -> None:
     """First numbers of xorshift32 from 2463534242 (Marsaglia 2003, from memory: 723471715)."""
     noise = emit._Noise(2463534242)
