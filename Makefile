@@ -4,7 +4,7 @@
 PYTHON ?= python3
 RUN := .venv/bin/python
 # One worker per core; `make test PYTEST_ARGS="-x -k words"` for a narrower run.
-PYTEST_ARGS ?= -n auto
+PYTEST_ARGS ?= -n auto --durations=10
 
 .PHONY: demo test lint bench clean venv venv-test
 
