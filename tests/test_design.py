@@ -40,7 +40,7 @@ from plant2.design import (
 )
 from plant2.equations import transfer
 from plant2.loopfile import Notch
-from tests.loops import PID, lead_loop, reference_loop
+from loops import PID, lead_loop, reference_loop
 
 
 def gains_of(*sets: str) -> Gains:

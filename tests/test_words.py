@@ -22,7 +22,7 @@ from plant2.errors import DesignError, OutOfRangeError
 from plant2.loopfile import Loop, Notch
 from plant2.simulate import IntegerController
 from plant2.words import Words, words_of
-from tests.loops import PID, lead_loop, reference_loop
+from loops import PID, lead_loop, reference_loop
 
 NOTCH = Notch(frequency_rad_per_s=TAU * 400, width=0.5, depth_db=20.0)
 

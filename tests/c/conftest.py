@@ -11,14 +11,18 @@ import ctypes
 import shutil
 import subprocess
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 import sample_words
 
+from plant2.design import design, task_of
 from plant2.emit import EmitFacts, render, selfcheck_vectors, write_files
 from plant2.equations import WordController
+from plant2.loopfile import load_loop
+from plant2.words import words_of
 
 HERE = Path(__file__).resolve().parent
 
@@ -32,7 +36,23 @@ FACTS = EmitFacts(
     sha256="",
 )
 
-SAMPLES = {controller.name: controller for controller in sample_words.all_samples()}
+EXAMPLES = sorted((HERE.parent.parent / "examples").glob("*/loop.toml"))
+
+
+def example_words(path: Path) -> WordController:
+    """Words of an example's loop file, named apart from the stored samples."""
+    loop = load_loop(path)
+    task = task_of(loop)
+    gains = design(loop, task).gains
+    assert gains is not None and loop.processor.word != "auto"
+    controller = words_of(task, gains, int(loop.processor.word)).controller
+    return replace(controller, name=f"example_{loop.name}")
+
+
+SAMPLES = {
+    controller.name: controller
+    for controller in (*sample_words.all_samples(), *map(example_words, EXAMPLES))
+}
 
 Run = Callable[..., str]
 

@@ -14,6 +14,9 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
+import pytest
+import sample_words
+
 from plant2.equations import WordController, partial_sum_range
 
 FUNCTIONS = (
@@ -26,6 +29,15 @@ FUNCTIONS = (
     "selfcheck",
     "same_state",
 )
+
+
+STORED = {controller.name: controller for controller in sample_words.all_samples()}
+
+
+@pytest.fixture(params=list(STORED))
+def controller(request: pytest.FixtureRequest) -> WordController:
+    """Each stored controller in turn: what is listed below was proven for these."""
+    return STORED[request.param]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -328,7 +340,7 @@ def counting_program(
     name: str, controller: WordController, sources: list[str], folder: Path
 ) -> Path:
     """C text that compares the resting output of all sources at every count that can differ."""
-    position = next(e for e in controller.resting if e.terms and e.terms[0].signal == "position")
+    clip = sample_words.clip_of(controller, "position")
     half = 1 << (controller.word_bits - 1)
     parts = []
     for number, text in enumerate(sources):
@@ -343,8 +355,8 @@ def counting_program(
             parts="\n".join(parts),
             functions=", ".join(f"s{n}_resting_output" for n in range(len(sources))),
             # Beyond the limit and its neighbours every version is constant: the ends stand for it.
-            low=max(position.low - 5, -half),
-            high=min(position.high + 5, half - 2),
+            low=max(clip[0] - 5, -half),
+            high=min(clip[1] + 5, half - 2),
             least=f"-{half - 1} - 1",
             most=half - 1,
         ),
