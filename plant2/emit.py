@@ -602,13 +602,18 @@ def _kept_excess(controller: WordController) -> str:
 
 
 def _inputs(controller: WordController) -> tuple[_Input, ...]:
-    """How far each input acts; beyond it acts as if clipped."""
+    """How far each input acts, as the caller counts it; beyond that it acts as if clipped."""
     half = 1 << (controller.word_bits - 1)
     found = []
     for name in controller.inputs:
-        readers = [e for e in controller.update for t in e.terms if t.signal == name]
-        clip = readers[0].limit if len(readers) == 1 and len(readers[0].terms) == 1 else None
-        low, high = clip if clip is not None else (-half, half - 1)
+        low, high = -half, half - 1
+        readers = [(e, t) for e in controller.update for t in e.terms if t.signal == name]
+        if len(readers) == 1:
+            e, t = readers[0]
+            if len(e.terms) == 1 and abs(t.factor) == 1 and not e.shift and e.limit is not None:
+                # signal = constant + input or constant - input
+                ends = [t.factor * (end - e.constant) for end in e.limit]
+                low, high = max(low, min(ends)), min(high, max(ends))
         found.append(_Input(name=name, low=low, high=high, unit=_INPUT_UNITS[name]))
     return tuple(found)
 
@@ -1187,29 +1192,27 @@ class _Searcher:
         ((name, (low, high)),) = self.ranges.items()
         return [{name: v} for v in range(low, high + 1)] if high - low < 1 << 14 else []
 
-    def active(self, e: WordEquation, upper: bool) -> dict[str, int] | None:
-        """A point where the limit acts, and where one that is a count off can be told from it."""
+    def tells(self, e: WordEquation, upper: bool, off: int, point: Mapping[str, int]) -> bool:
+        """Whether the limit acts here and one that is `off` by a count can be told from it."""
         assert e.limit is not None
-        bound = e.limit[1] if upper else e.limit[0]
+        here = self.run(point)
+        beyond = here.before[e.name] - e.limit[1] if upper else e.limit[0] - here.before[e.name]
+        moved = self.run(point, limit={e.name: (0, off) if upper else (off, 0)})
+        return beyond >= 1 and moved.after != here.after
+
+    def active(self, e: WordEquation, upper: bool, off: int) -> dict[str, int] | None:
+        """A point that tells the limit from one that is `off` by a count."""
         sign = 1 if upper else -1
-        nudge = {e.name: (0, 1) if upper else (-1, 0)}
-
-        def good(point: Mapping[str, int]) -> bool:
-            here = self.run(point)
-            if sign * (here.before[e.name] - bound) < 1:
-                return False
-            return self.run(point, limit=nudge).after != here.after
-
         for _ in range(40):
             point = self.draw()
-            if good(point):
+            if self.tells(e, upper, off, point):
                 return point
             for name, pair in self.ranges.items():
                 start = self.run(point).before[e.name]
                 for end in self.type_range if name in self.inputs else pair:
                     moved = {**point, name: end}
                     if sign * (self.run(moved).before[e.name] - start) > 0:
-                        if good(moved):
+                        if self.tells(e, upper, off, moved):
                             return moved
                         point = moved
                         break
@@ -1529,13 +1532,17 @@ def _record_limits(
             if not _can_act(e, ranges, upper):
                 unreached.append(f"{e.name}: the {side} limit can never act")
                 continue
-            point = search.active(e, upper)
-            if point is None:
-                unreached.append(f"{e.name}: nothing found that shows the {side} limit")
-                continue
-            notes.from_state(point)
-            notes.update(point["reference"], point["position"], point["added"])
-            notes.same_state()
+            point = None
+            for off in (1, -1):
+                if point is not None and search.tells(e, upper, off, point):
+                    continue
+                point = search.active(e, upper, off)
+                if point is None:
+                    unreached.append(f"{e.name}: nothing found that shows the {side} limit")
+                    continue
+                notes.from_state(point)
+                notes.update(point["reference"], point["position"], point["added"])
+                notes.same_state()
 
 
 # --- files ---------------------------------------------------------------------------------------

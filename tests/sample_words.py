@@ -517,9 +517,133 @@ def valve_spool() -> WordController:
     )
 
 
+def gauge_table() -> WordController:
+    """PD on a weak spring, 16-bit words, counts and codes from zeros of their own, both reversed.
+
+    Counts 0 to 4095 around 2040 and codes 0 to 1023 around 512; inside, everything is counted from
+    zero in the forward sense. The returned code is cut down when the force was cut up.
+    """
+    counts, travel, codes = (-2055, 2040), (-1900, 1900), (-400, 400)
+    kp, kr = 5734, 6001  # 2^-14
+
+    def from_zero(name: str, meaning: str, source: str, zero: int, limit: Range) -> WordEquation:
+        unit = "count" if zero == 2040 else "code"
+        e = _clip(name, meaning, unit, source, limit)
+        return replace(e, terms=(_plain(source, sign=-1),), constant=zero)
+
+    update = (
+        from_zero("position_count", "position from zero", "position", 2040, counts),
+        from_zero("reference_count", "reference from zero", "reference", 2040, travel),
+        from_zero("added_code", "added codes, forward sense", "added", 0, (-1023, 1023)),
+        WordEquation(
+            name="change",
+            meaning="change of position since the last sample",
+            unit="count",
+            terms=(_plain("position_count"), _plain("position_count", 1, sign=-1)),
+        ),
+        WordEquation(
+            name="rate",
+            meaning="part of the output that opposes speed",
+            unit="code",
+            terms=(
+                _gain("rate_pole", 10240, 14, "rate", 1),
+                _gain("rate_gain", 23001, 13, "change", lift=4),
+            ),
+            rest="rate_rest",
+            shift=14,
+            frac_bits=3,
+            limit=(-32767, 32767),
+        ),
+        WordEquation(
+            name="unlimited",
+            meaning="output before its limit, from zero",
+            unit="code",
+            terms=(
+                _gain("kr", kr, 14, "reference_count", lift=2),
+                _gain("kp", -kp, 14, "position_count", lift=2),
+                _plain("rate", sign=-1, lift=13),
+                _plain("added_code", lift=16),
+            ),
+            held="standing_output",
+            shift=16,
+            wide=True,
+        ),
+        _clip("limited_code", "output within its limit, from zero", "code", "unlimited", codes),
+        WordEquation(
+            name="output_code",
+            meaning="returned code",
+            unit="code",
+            terms=(_plain("limited_code", sign=-1),),
+            constant=512,
+        ),
+        WordEquation(
+            name="excess",
+            meaning="what the limit took away from the returned code",
+            unit="code",
+            terms=(_plain("limited_code"), _plain("unlimited", sign=-1)),
+        ),
+    )
+    reset = (
+        from_zero("start_position", "position to start at", "position", 2040, counts),
+        from_zero("start_reference", "reference to start at", "position", 2040, travel),
+        from_zero("start_code", "code to start with, from zero", "output", 512, codes),
+        WordEquation(
+            name="start_standing",
+            meaning="what the law lacks at the start",
+            unit="code",
+            terms=(
+                _plain("start_code", lift=16),
+                _gain("kr_down", -kr, 14, "start_reference", lift=2),
+                _gain("kp_up", kp, 14, "start_position", lift=2),
+            ),
+            frac_bits=16,
+            wide=True,
+        ),
+    )
+    resting = (
+        from_zero("rest_position", "position to rest at", "position", 2040, counts),
+        WordEquation(
+            name="rest_limited",
+            meaning="output that holds the spring there",
+            unit="code",
+            terms=(_gain("spring", 4370, 18, "rest_position"),),
+            shift=18,
+            limit=codes,
+        ),
+        WordEquation(
+            name="rest_code",
+            meaning="the same as a returned code",
+            unit="code",
+            terms=(_plain("rest_limited", sign=-1),),
+            constant=512,
+        ),
+    )
+    return _controller(
+        name="gauge_table",
+        word_bits=16,
+        update=update,
+        reset=reset,
+        resting=resting,
+        resets={
+            "standing_output": "start_standing",
+            "position_count_before": "start_position",
+        },
+    )
+
+
 def all_samples() -> tuple[WordController, ...]:
     """Every stored controller."""
-    return (focus_stage(), tilt_mirror(), valve_spool())
+    return (focus_stage(), tilt_mirror(), valve_spool(), gauge_table())
+
+
+def clip_of(controller: WordController, name: str) -> Range:
+    """How far an input acts, as the caller counts it."""
+    half = 1 << (controller.word_bits - 1)
+    (reader,) = [e for e in controller.update for t in e.terms if t.signal == name]
+    (t,) = reader.terms
+    assert reader.limit is not None and abs(t.factor) == 1 and reader.shift == 0
+    ends = [t.factor * (end - reader.constant) for end in reader.limit]
+    return max(min(ends), -half), min(max(ends), half - 1)
 
 
 class FractionController:

@@ -195,6 +195,7 @@ NEVER_ACTS = {
     "focus_stage": eight("update_added", "excess_wide"),
     "tilt_mirror": set(),
     "valve_spool": eight("update_added", "excess_wide"),
+    "gauge_table": set(),
 }
 """The interval of the sum lies within the limit (the type's own range, or nearly)."""
 
@@ -202,6 +203,7 @@ NEVER_ACTS_IN_RESET = {
     "focus_stage": set(),
     "tilt_mirror": eight("reset", "start_integral"),
     "valve_spool": set(),
+    "gauge_table": set(),
 }
 """The sum is linear in position and output, and its four corners lie within the limit."""
 
@@ -209,6 +211,7 @@ ONLY_EVEN_SUMS = {
     "focus_stage": set(),
     "tilt_mirror": set(),
     "valve_spool": {"update_added: lead: rounding constant one too large"},
+    "gauge_table": set(),
 }
 """Every sum is even and so is the next tie: one more reaches no tie that was not reached."""
 
@@ -243,8 +246,22 @@ NO_COUNT_SHOWS_IT = {
         "resting_output: rest_position: upper limit +1",
         "resting_output: rest_position: upper limit -1",
     },
+    "gauge_table": eight("resting_output", "rest_limited_wide")
+    | {
+        "resting_output: rest_limited: rounding constant one too large",
+        "resting_output: rest_limited: rounding constant one too small",
+        "resting_output: rest_position_wide: lower limit +1",
+        "resting_output: rest_position_wide: lower limit -1",
+        "resting_output: rest_position_wide: upper limit +1",
+        "resting_output: rest_position_wide: upper limit -1",
+        "resting_output: word spring +1",
+    },
 }
 """The function of one count gives the same code at every count: all of them are tried."""
+
+
+COUNTS = {"focus_stage": 196, "tilt_mirror": 304, "valve_spool": 210, "gauge_table": 211}
+"""How many faults are planted: fewer would mean that a rule no longer finds its place."""
 
 
 def test_every_fault_is_found(
@@ -257,7 +274,7 @@ def test_every_fault_is_found(
     name = controller.name
     text = (emitted / f"{name}.c").read_text("utf-8")
     mutants = mutants_of(text)
-    assert len(mutants) == {"focus_stage": 196, "tilt_mirror": 304, "valve_spool": 210}[name]
+    assert len(mutants) == COUNTS[name]
     answers = selfchecks(
         name, [text, *(m.text for m in mutants)], tmp_path, any_cc, emitted, command
     )
