@@ -26,7 +26,7 @@ from plant2.equations import WordController, WordEquation, WordTerm
 from plant2.loopfile import Loop, Notch
 from plant2.simulate import IntegerController
 from plant2.words import words_of
-from tests.loops import PID, lead_loop, reference_loop
+from loops import PID, lead_loop, reference_loop
 
 SAMPLES = {"pd": focus_stage(), "pid": tilt_mirror(), "lead": valve_spool()}
 ROOMY = 200
