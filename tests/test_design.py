@@ -11,6 +11,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from loops import PID, lead_loop, reference_loop
 
 from plant2.closedloop import (
     bandwidth_rad_per_s,
@@ -40,7 +41,6 @@ from plant2.design import (
 )
 from plant2.equations import transfer
 from plant2.loopfile import Notch
-from loops import PID, lead_loop, reference_loop
 
 
 def gains_of(*sets: str) -> Gains:

@@ -13,6 +13,7 @@ from fractions import Fraction
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
+from loops import PID, lead_loop, reference_loop
 
 from plant2.chain import built_closed_loop
 from plant2.closedloop import pair_figures, poles_delta
@@ -22,7 +23,6 @@ from plant2.errors import DesignError, OutOfRangeError
 from plant2.loopfile import Loop, Notch
 from plant2.simulate import IntegerController
 from plant2.words import Words, words_of
-from loops import PID, lead_loop, reference_loop
 
 NOTCH = Notch(frequency_rad_per_s=TAU * 400, width=0.5, depth_db=20.0)
 
