@@ -19,6 +19,7 @@ from math import floor
 
 import pytest
 from apytypes import APyFixed, OverflowMode, QuantizationMode
+from loops import PID, lead_loop, reference_loop
 from sample_words import FractionController, focus_stage, tilt_mirror, valve_spool
 
 from plant2.design import design, task_of
@@ -26,7 +27,6 @@ from plant2.equations import WordController, WordEquation, WordTerm
 from plant2.loopfile import Loop, Notch
 from plant2.simulate import IntegerController
 from plant2.words import words_of
-from loops import PID, lead_loop, reference_loop
 
 SAMPLES = {"pd": focus_stage(), "pid": tilt_mirror(), "lead": valve_spool()}
 ROOMY = 200
