@@ -11,6 +11,7 @@ Rules of this file:
 
 from __future__ import annotations
 
+import os
 import sys
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
@@ -25,6 +26,11 @@ if TYPE_CHECKING:
     from plant2.chain import Evidence
     from plant2.check import Report
     from plant2.loopfile import Loop
+
+# Matrices here are small: a second thread of the linear algebra only waits for the first, and on a
+# busy machine it waits long. Before numpy is loaded, and never against the user's own setting.
+for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
+    os.environ.setdefault(_name, "1")
 
 app = typer.Typer(
     add_completion=False,
@@ -264,8 +270,6 @@ def main() -> None:
         sys.exit(130)
     except BrokenPipeError:
         # the reader of a pipe has gone: nothing to tell it
-        import os
-
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         sys.exit(0)
     except MemoryError:

@@ -1064,14 +1064,15 @@ def stiffness_at_rest(loop: ClosedLoop) -> float:
 
     Notes
     -----
-    1/(-c m^-1 b_force) of the delta form.
+    1/(-c m^-1 b_force) of the delta form. Integral action is a controller pole at z = 1 exactly,
+    which the exact coefficients in delta show as a 0.
     """
+    control = loop.controller
+    if control.denominator[-1] == 0.0 and control.position[-1] != 0.0:
+        return math.inf
     matrices = loop_matrices(loop)
     x = np.linalg.solve(matrices.m, -matrices.b_force)
-    give = abs(float(matrices.c_position @ x))
-    soft = abs(float(np.abs(matrices.c_position) @ np.abs(x)))
-    # integral action leaves rounding only
-    return math.inf if give <= 1e-11 * max(soft, 1e-300) or give == 0.0 else 1.0 / give
+    return 1.0 / abs(float(matrices.c_position @ x))
 
 
 def linear_step(loop: ClosedLoop, samples: int) -> tuple[Real, Real]:

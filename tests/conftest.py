@@ -10,6 +10,10 @@ from __future__ import annotations
 
 import os
 from collections.abc import Iterator
+
+# One thread of linear algebra a worker, before numpy is loaded: the matrices are small, and more
+# threads than cores wait for each other.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 from pathlib import Path
 
 import pytest
