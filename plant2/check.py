@@ -23,6 +23,7 @@ from plant2.design import Nearest, settling_band
 from plant2.equations import (
     ControllerTransfer,
     WordController,
+    WordEquation,
     from_plain,
     to_plain,
     transfer,
@@ -581,11 +582,8 @@ def as_json(report: Report, *, command: str = "check", with_words: bool = False)
             {
                 "name": q.name,
                 "fraction_bits": q.frac_bits,
-                "bound": max(-q.low, q.high),
-                "capacity": (
-                    1 << ((e.controller.sum_bits if q.wide else e.controller.word_bits) - 1)
-                )
-                - 1,
+                "bound": _magnitude(q, e.controller),
+                "capacity": _capacity(q, e.controller),
             }
             for q in e.controller.update
         ],
@@ -622,6 +620,15 @@ def as_json(report: Report, *, command: str = "check", with_words: bool = False)
     if with_words and e.controller is not None:
         out["words"] = to_plain(e.controller)
     return out
+
+
+def _capacity(q: WordEquation, controller: WordController) -> int:
+    return (1 << ((controller.sum_bits if q.wide else controller.word_bits) - 1)) - 1
+
+
+def _magnitude(q: WordEquation, controller: WordController) -> int:
+    """Largest magnitude; the one value of the type without a counterpart counts as that."""
+    return max(q.high, min(-q.low, _capacity(q, controller)))
 
 
 def _requirement_as_json(r: Requirement) -> dict[str, Any]:
