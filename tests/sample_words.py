@@ -632,8 +632,13 @@ def gauge_table() -> WordController:
 
 
 def all_samples() -> tuple[WordController, ...]:
-    """Every stored controller."""
-    return (focus_stage(), tilt_mirror(), valve_spool(), gauge_table())
+    """The stored controllers whose signals are counted as the caller counts them."""
+    return (focus_stage(), tilt_mirror(), valve_spool())
+
+
+def stored() -> tuple[WordController, ...]:
+    """Every stored controller, one with zeros of its own among them."""
+    return (*all_samples(), gauge_table())
 
 
 def clip_of(controller: WordController, name: str) -> Range:

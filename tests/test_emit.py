@@ -32,7 +32,7 @@ from plant2.simulate import IntegerController
 
 GOLDEN = Path(__file__).resolve().parent / "golden"
 
-SAMPLES = {controller.name: controller for controller in sample_words.all_samples()}
+SAMPLES = {controller.name: controller for controller in sample_words.stored()}
 VECTORS = {name: emit.selfcheck_vectors(controller) for name, controller in SAMPLES.items()}
 
 FACTS = {

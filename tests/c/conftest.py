@@ -51,7 +51,7 @@ def example_words(path: Path) -> WordController:
 
 SAMPLES = {
     controller.name: controller
-    for controller in (*sample_words.all_samples(), *map(example_words, EXAMPLES))
+    for controller in (*sample_words.stored(), *map(example_words, EXAMPLES))
 }
 
 Run = Callable[..., str]

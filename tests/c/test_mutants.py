@@ -31,7 +31,7 @@ FUNCTIONS = (
 )
 
 
-STORED = {controller.name: controller for controller in sample_words.all_samples()}
+STORED = {controller.name: controller for controller in sample_words.stored()}
 
 
 @pytest.fixture(params=list(STORED))
