@@ -16,7 +16,7 @@ import math
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
-from typing import Any, Literal
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -44,8 +44,8 @@ UNIT = 2.0**-53
 BITS = 256
 """Precision of the balls that enclose the matrices."""
 
-_BLOCK = 10
-"""Impulse responses are computed in blocks of 2^10 samples."""
+_BLOCK = 8
+"""Impulse responses are computed in blocks of 2^8 samples."""
 
 _LONGEST = 1 << 18
 """Samples after which a loop counts as too slow to be bounded."""
@@ -702,10 +702,11 @@ def _assemble(
         raw[i] = ks * measured[i]
     raw[at["sensor", ""]], raw[at["one", ""]] = arb(1), zero_count
     rows: list[Any] = [] if positions_only else [*(wide[name] for name in part.signals), raw]
-    flow = flint.arb_mat(
-        [[arb(1 if i == j else 0) for j in range(nx + 3)] for i in range(nx)]
-    )
-    marks, ends_at, flows, spans = [], [], [], []
+    flow = flint.arb_mat([[arb(1 if i == j else 0) for j in range(nx + 3)] for i in range(nx)])
+    marks: list[tuple[int, int]] = []
+    ends_at: list[tuple[int, int]] = []
+    flows: list[Any] = []
+    spans: list[float] = []
     for length, count, which in pieces:
         part_s = length / count
         spans.append(float(part_s.abs_upper()) * (1.0 + 2.0**-50))
@@ -729,9 +730,7 @@ def _assemble(
     def laid_out(row: Real) -> tuple[tuple[int, ...], ...]:
         first = len(rows)
         rows.extend(shown(row, f) for f in flows)
-        return tuple(
-            (*range(first + a, first + b), first + b % len(flows)) for a, b in marks
-        )
+        return tuple((*range(first + a, first + b), first + b % len(flows)) for a, b in marks)
 
     position_rows = laid_out(space.c_position)
     same = np.array_equal(space.c_position, space.c_main_position)
@@ -827,7 +826,7 @@ def _swelling(matrix: Real, size: Real, span_s: float, period_s: float) -> Real:
 
 
 def _motion(
-    task: Task, loop: _Loop, peaks: Peaks, rows: tuple[tuple[int, int], ...], row: Real
+    task: Task, loop: _Loop, peaks: Peaks, rows: tuple[tuple[int, ...], ...], row: Real
 ) -> Motion:
     """A position between samples: its rows, and h^2/8 times the largest second derivative."""
     space = task.sampled.space
@@ -903,9 +902,7 @@ def _plant_rows(task: Task, loop: _Loop) -> list[tuple[set[int], Real]]:
         )
     for number, ends in enumerate(loop.ends):
         if number or task.sampled.fraction == 0.0:
-            out.extend(
-                ({r}, line) for r, line in zip(ends[:-1], np.eye(len(space.a)), strict=True)
-            )
+            out.extend(({r}, line) for r, line in zip(ends[:-1], np.eye(len(space.a)), strict=True))
     return out
 
 
@@ -1062,6 +1059,8 @@ class ControllerBounds:
         In the order of the list.
     idle_limits : tuple of str
         Signals whose limit can never act.
+    cuts : tuple of str
+        Signals that were taken as inputs where they are read.
 
     Notes
     -----
@@ -1070,6 +1069,7 @@ class ControllerBounds:
 
     signals: tuple[SignalBound, ...]
     idle_limits: tuple[str, ...]
+    cuts: tuple[str, ...]
 
     def signal(self, name: str) -> SignalBound:
         """The bound of one signal.
@@ -1100,24 +1100,9 @@ class ControllerBounds:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class OpenColumn:
-    """One bounded input of a controller by itself.
-
-    Parameters
-    ----------
-    kind : str
-        "input" (raw), "cut" (a limited signal taken as an input), "rounding", "held" or "one".
-    name : str
-        Which.
-    low, high : float
-        Range. [unit of the signal]
-    constant : bool
-        Does not change in time.
-
-    Notes
-    -----
-    See `controller_bounds`.
-    """
+class _OpenColumn:
+    """One bounded input of a controller by itself: "input" (raw), "cut" (a limited signal taken as
+    an input), "rounding", "held" or "one"; a constant one does not change in time."""
 
     kind: str
     name: str
@@ -1131,7 +1116,7 @@ def _type_range(bits: int) -> Range:
 
 
 def _limited_copies(controller: WordController) -> dict[str, tuple[str, int, int]]:
-    """Signals that are nothing but another signal of the same sample, limited: sign and constant."""
+    """Signals that are nothing but another one of the same sample, limited: sign and constant."""
     found = {}
     bits = {e.name: e.frac_bits for e in controller.update}
     for e in controller.update:
@@ -1177,48 +1162,23 @@ def _remainder_range(
     return min(values), max(values)
 
 
-def open_system(
+def _open_system(
     controller: WordController, cut: Iterable[str], ranges: Mapping[str, Range]
-) -> tuple[_System, float, tuple[OpenColumn, ...], _List]:
-    """The linear part of a controller by itself, with some signals taken as inputs.
-
-    Parameters
-    ----------
-    controller : WordController
-        The words.
-    cut : iterable of str
-        Signals that count as inputs where they are read.
-    ranges : mapping of str to (int, int)
-        Their proven ranges.
-
-    Returns
-    -------
-    system
-        Matrices of the list, exact but for one rounding.
-    float
-        Samples after which nothing is left; infinite when unstable.
-    tuple of OpenColumn
-        The inputs.
-    rows
-        The list in rows.
-
-    Notes
-    -----
-    Own derivation.
-    """
+) -> tuple[_System, tuple[_OpenColumn, ...], _List]:
+    """The linear part of a controller by itself, with some signals taken as inputs."""
     import flint
 
     part = _list_of(controller, cut)
     low, high = _type_range(controller.word_bits)
     columns = [
-        OpenColumn(kind="input", name=name, low=float(low), high=float(high), constant=False)
+        _OpenColumn(kind="input", name=name, low=float(low), high=float(high), constant=False)
         for name in controller.inputs
     ]
     for name in sorted(set(cut)):
         unit = 2.0 ** -controller.equation(name).frac_bits
-        a, b = ranges[name]
+        a, b = ranges.get(name, (0, 0))
         columns.append(
-            OpenColumn(
+            _OpenColumn(
                 kind="cut",
                 name=name,
                 low=_down(Fraction(a) * Fraction(unit)),
@@ -1229,7 +1189,7 @@ def open_system(
     carried = [False] * len(columns)
     for r in part.roundings:
         columns.append(
-            OpenColumn(kind="rounding", name=r.name, low=r.low, high=r.high, constant=False)
+            _OpenColumn(kind="rounding", name=r.name, low=r.low, high=r.high, constant=False)
         )
         carried.append(r.carried)
     for e in controller.update:
@@ -1237,7 +1197,7 @@ def open_system(
             a, b = e.held_range
             unit_held = Fraction(1, 1 << e.sum_frac_bits)
             columns.append(
-                OpenColumn(
+                _OpenColumn(
                     kind="held",
                     name=e.held,
                     low=_down(a * unit_held),
@@ -1246,7 +1206,7 @@ def open_system(
                 )
             )
             carried.append(False)
-    columns.append(OpenColumn(kind="one", name="", low=1.0, high=1.0, constant=True))
+    columns.append(_OpenColumn(kind="one", name="", low=1.0, high=1.0, constant=True))
     carried.append(False)
 
     states = part.states or (("", 1),)
@@ -1276,15 +1236,14 @@ def open_system(
             else:
                 following.append(wide.get(name, laid_out({})))
         a_ball = flint.arb_mat([row[:size] for row in following])
-        samples = _samples_for(_doubles(a_ball)[0])
         system = _System(
-            powers=_powers(a_ball, samples),
+            powers=_powers(a_ball, _samples_for(_doubles(a_ball)[0])),
             b=_doubles(flint.arb_mat([row[size:] for row in following])),
             c=_doubles(flint.arb_mat([row[:size] for row in rows])),
             d=_doubles(flint.arb_mat([row[size:] for row in rows])),
             carried=np.array(carried),
         )
-    return system, samples, tuple(columns), part
+    return system, tuple(columns), part
 
 
 def _down(value: Fraction) -> float:
@@ -1344,12 +1303,12 @@ def _linear_ranges(
 ) -> tuple[dict[str, Range], dict[str, set[str]], set[str]]:
     """Ranges before the limit from one choice of cuts, the cuts that each rests on, and signals
     that feed themselves without decaying."""
-    system, samples, columns, part = open_system(controller, cut, ranges)
+    system, columns, part = _open_system(controller, cut, ranges)
     slow = _runaways(part, system.powers[0][0]) - cut
     if slow:
         return {}, {}, slow
     try:
-        peaks = _peaks(system, samples)
+        peaks = _peaks(system, _samples_for(system.powers[0][0]))
     except OutOfRangeError:
         # nothing decays soon enough: without memory, every signal of the past is an input
         slow = {name for name, _ in part.states if name not in controller.inputs} - cut
@@ -1484,7 +1443,9 @@ def controller_bounds(controller: WordController) -> ControllerBounds:
                 linear=e.name in decided,
             )
         )
-    return ControllerBounds(signals=tuple(out), idle_limits=tuple(sorted(idle)))
+    return ControllerBounds(
+        signals=tuple(out), idle_limits=tuple(sorted(idle)), cuts=tuple(sorted(cut))
+    )
 
 
 # --------------------------------------------------------------------------------------------------
@@ -1592,7 +1553,9 @@ class Ranges:
         raise KeyError(name)
 
 
-def _evaluate(equations: Iterable[WordEquation], given: Mapping[str, Fraction]) -> dict[str, Fraction]:
+def _evaluate(
+    equations: Iterable[WordEquation], given: Mapping[str, Fraction]
+) -> dict[str, Fraction]:
     """A list without memory on real numbers: neither rounded nor limited. [unit of each signal]"""
     values = dict(given)
     bits = dict.fromkeys(given, 0)
@@ -1650,9 +1613,9 @@ def _starts(task: Task, controller: WordController) -> _Starts:
     effort1 = holding_effort(task.plant, size) / task.effort_per_code
     # a code from its line, a count from its position; the last part stands for doubles
     error = abs(float(code0 - actuator.zero_code) - effort0) + 0.5 + 0.5 * abs(effort1 - effort0)
-    slope = abs(float(code1 - code0) - (effort1 - effort0))
+    drift = abs(float(code1 - code0) - (effort1 - effort0))
     blur = 1e-12 * (abs(effort0) + abs(effort1))
-    return _Starts(held=held, error=(error + blur, slope + blur))
+    return _Starts(held=held, error=(error + blur, drift + blur))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -1768,6 +1731,16 @@ def _largest(top: int, holds: Callable[[int], bool]) -> int | None:
     return low
 
 
+def _gains_for(
+    task: Task, controller: WordController, gains: LoopPeaks | None, force: float
+) -> LoopPeaks:
+    """Peak gains that are known, or new ones where a force asks for a column that is missing."""
+    known = gains is not None and any(c.kind == "force" for c in gains.columns)
+    if gains is None or (force > 0.0 and not known):
+        return loop_peaks(task, controller, force=force > 0.0)
+    return gains
+
+
 def _voids(task: Task) -> tuple[str, ...]:
     """What the linear plant leaves out."""
     out = []
@@ -1805,7 +1778,7 @@ def ranges(
     added : float
         Largest magnitude of added codes. [code]
     gains : LoopPeaks or None
-        Peak gains if known; with a force column where there is a force.
+        Peak gains if known.
 
     Returns
     -------
@@ -1838,7 +1811,7 @@ def ranges(
             )
     level = (sensor.noise_peak or 0.0) if noise is None else noise
     counts = level * scale * (1.0 + 1e-15)
-    every = loop_peaks(task, controller, force=force > 0.0) if gains is None else gains
+    every = _gains_for(task, controller, gains, force)
     starts = _starts(task, controller)
 
     def case(reach: int, *, still: bool = False, step: float = 0.0) -> _Case:
@@ -2018,7 +1991,9 @@ def deviation(
     shares = (most[at] + sign * offset[at] + blur[at] + missed[piece]) * scale
     outward = 1.0 + 1e-12
     output = every.rounded_output
-    by_name = {every.columns[i].name or "sensor": float(v) for i, v in zip(picked, shares, strict=True)}
+    by_name = {
+        every.columns[i].name or "sensor": float(v) for i, v in zip(picked, shares, strict=True)
+    }
     inner = tuple((n, v) for n, v in by_name.items() if n not in ("sensor", output))
     first = motion.pieces[0][0]
     distance = task.plant.travel if reference is None else reference
@@ -2193,7 +2168,7 @@ def limit_cycles(
     most half their range x sum|h|. One code should move the plant by less than one count
     (Peterchev and Sanders, IEEE Trans. Power Electronics 18, 2003, from memory).
     """
-    every = loop_peaks(task, controller, force=force > 0.0) if gains is None else gains
+    every = _gains_for(task, controller, gains, force)
     picked, _, half = _error_columns(every)
     whole = every.peaks.most[:, picked] @ half
     missed = every.position.missed[:, picked] @ half
@@ -2346,3 +2321,95 @@ def hints(loop: ClosedLoop, edges: Sequence[float]) -> tuple[Hint, ...]:
             )
         )
     return tuple(out)
+
+
+# --------------------------------------------------------------------------------------------------
+# Impulse responses, for inputs that attain a bound
+
+
+def controller_responses(
+    controller: WordController, cut: Iterable[str], samples: int
+) -> tuple[tuple[tuple[str, str], ...], Real]:
+    """Impulse responses of every signal of a controller by itself, limits left out.
+
+    Parameters
+    ----------
+    controller : WordController
+        The words.
+    cut : iterable of str
+        Limited signals that count as inputs.
+    samples : int
+        Length, at least 1.
+
+    Returns
+    -------
+    tuple of (str, str)
+        Kind and name of every input: "input", "cut", "rounding", "held", "one".
+    array of float, shape (samples, signals, inputs)
+        Responses in units of the signals; not a proof. [unit per unit]
+
+    Notes
+    -----
+    Plain recursion in doubles.
+    """
+    system, columns, _ = _open_system(controller, cut, {})
+    names = tuple((c.kind, c.name) for c in columns)
+    return names, _plain_responses(system, samples)
+
+
+def loop_responses(
+    task: Task, controller: WordController | Equations, samples: int, *, phases: int = PHASES
+) -> tuple[tuple[Column, ...], tuple[str, ...], Real]:
+    """Impulse responses of the closed loop, limits left out.
+
+    Parameters
+    ----------
+    task : Task
+        Plant and scales.
+    controller : WordController or Equations
+        The list.
+    samples : int
+        Length, at least 1.
+    phases : int
+        Instants per sample period at which the position is shown.
+
+    Returns
+    -------
+    tuple of Column
+        The inputs.
+    tuple of str
+        What the rows show: the signals, "raw position", then "position" at each instant.
+    array of float, shape (samples, rows, inputs)
+        Responses; not a proof. [unit per unit; m or rad]
+
+    Notes
+    -----
+    Plain recursion in doubles.
+    """
+    import flint
+
+    with flint.ctx.workprec(BITS):
+        loop = _assemble(task, controller, phases=phases)
+        a, _ = _doubles(loop.step)
+    rows = sorted({r for piece in loop.position_rows for r in piece})
+    count = len(loop.list.signals) + 1
+    pick = [*range(count), *rows]
+    system = _System(
+        powers=((a, np.zeros_like(a)),),
+        b=loop.b,
+        c=(loop.c[0][pick], loop.c[1][pick]),
+        d=(loop.d[0][pick], loop.d[1][pick]),
+    )
+    names = (*loop.list.signals, "raw position", *("position" for _ in rows))
+    return loop.columns, names, _plain_responses(system, samples)
+
+
+def _plain_responses(system: _System, samples: int) -> Real:
+    a, b, c, d = system.powers[0][0], system.b[0], system.c[0], system.d[0]
+    out = np.empty((samples, *d.shape))
+    out[0] = d
+    state = b
+    for k in range(1, samples):
+        out[k] = c @ state
+        state = a @ state
+    return out
