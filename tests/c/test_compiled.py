@@ -150,3 +150,36 @@ def test_selfcheck_needs_nothing_but_the_header(
     own = {f"{name}_{f}" for f in ("reset", "update", "update_added", "resting_output", "limited")}
     # Compilers may copy a struct with memcpy; that is theirs to provide.
     assert asked - {"memcpy"} == own
+
+
+PROCESSORS = {
+    "avr": "avr",
+    "msp430": "msp430",
+    "thumbv6m-none-eabi": "thumb",
+    "riscv32": "riscv32",
+    "x86_64": "x86-64",
+}
+"""What clang is asked to read for, and under which name it lists what it knows."""
+
+
+@pytest.mark.parametrize("target", PROCESSORS)
+def test_no_warning_where_int_has_another_width(
+    target: str, controller: WordController, emitted: Path, command: Run, tmp_path: Path
+) -> None:
+    """Read for other processors, two of them with an int of 16 bits; nothing is linked."""
+    if shutil.which("clang") is None:
+        pytest.skip("clang is not installed")
+    known = {line.split()[0] for line in command(["clang", "--print-targets"]).splitlines()}
+    if PROCESSORS[target] not in known:
+        pytest.skip(f"this clang does not know {target}")
+    quiet = ["-mmcu=atmega328p", "-Wno-avr-rtlib-linking-quirks"] if target == "avr" else []
+    reading = ["clang", f"--target={target}", *quiet, *WARNINGS, "-ffreestanding", "-fsyntax-only"]
+    width = tmp_path / "width.c"
+    bits = 16 if target in {"avr", "msp430"} else 32
+    width.write_text(f"typedef char right[sizeof(int) * 8 == {bits} ? 1 : -1];\n", "utf-8")
+    command([*reading, width])
+    command([*reading, emitted / f"{controller.name}.c"])
+    command([*reading, emitted / f"{controller.name}_selfcheck.c"])
+    words = tmp_path / "words.c"
+    words.write_text(f'#include "{controller.name}_words.h"\nextern int unused;\n', "utf-8")
+    command([*reading, "-I", emitted, words])
