@@ -177,9 +177,12 @@ def test_no_warning_where_int_has_another_width(
     width = tmp_path / "width.c"
     bits = 16 if target in {"avr", "msp430"} else 32
     width.write_text(f"typedef char right[sizeof(int) * 8 == {bits} ? 1 : -1];\n", "utf-8")
-    command([*reading, width])
-    command([*reading, emitted / f"{controller.name}.c"])
-    command([*reading, emitted / f"{controller.name}_selfcheck.c"])
+    for text in (
+        width,
+        emitted / f"{controller.name}.c",
+        emitted / f"{controller.name}_selfcheck.c",
+    ):
+        assert command([*reading, text]) == ""
     words = tmp_path / "words.c"
     words.write_text(f'#include "{controller.name}_words.h"\nextern int unused;\n', "utf-8")
-    command([*reading, "-I", emitted, words])
+    assert command([*reading, "-I", emitted, words]) == ""
