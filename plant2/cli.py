@@ -239,6 +239,7 @@ def emit(
         from plant2 import present
         from plant2.emit import write_files
         from plant2.firmware import firmware_files
+        from plant2.proof import ProofError
 
         evidence, report = _checked(loop, sets)
         console = _console(None)
@@ -250,9 +251,13 @@ def emit(
             elif report.emittable_despite_misses:
                 _complain("--despite-misses writes the files and marks every one of them")
             raise typer.Exit(1)
-        files = firmware_files(report, despite_misses=despite_misses)
-        write_files(into, files)
-        present.written(console, into, files)
+        try:
+            firmware = firmware_files(report, despite_misses=despite_misses)
+        except ProofError as fault:
+            _complain(str(fault))
+            raise typer.Exit(1) from None
+        write_files(into, firmware.files)
+        present.written(console, into, firmware.files, firmware.told)
         raise typer.Exit(0 if report.met else 1)
 
 

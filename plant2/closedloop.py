@@ -438,8 +438,11 @@ def log_pole(delta: Complex | complex, period_s: float) -> Complex:
     """
     d = np.asarray(delta, dtype=complex)
     with np.errstate(divide="ignore"):
-        real = 0.5 * np.log1p(np.maximum(_outside(d), -1.0))
-    s: Complex = (real + 1j * np.arctan2(d.imag, 1.0 + d.real)) / period_s
+        real = 0.5 * np.log1p(np.maximum(_outside(d), -1.0)) / period_s
+    # put together, not added: at z = 0 the real part is infinite
+    s = np.empty(d.shape, dtype=complex)
+    s.real = real
+    s.imag = np.arctan2(d.imag, 1.0 + d.real) / period_s
     return s
 
 
@@ -896,6 +899,25 @@ def peak_sensitivity(loop: ClosedLoop, poles: Complex | None = None) -> float:
     return float(math.exp(best.max()))
 
 
+_MANY_SAMPLES = 60
+"""Delay margins beyond so many samples are confirmed without assembling the loop's matrix."""
+
+
+def _pole_near(loop: ClosedLoop, angle: float) -> float | None:
+    """|z|^2 - 1 of the closed-loop pole nearest to a point of the unit circle; None if none is."""
+    point = circle(np.array([angle]))
+    start = point
+    for _ in range(40):
+        value, slope = _loop_gain_and_slope(loop, point)
+        step = (1.0 + value) / slope
+        point = point - step
+        if not np.all(np.isfinite(point)) or np.abs(point - start)[0] > 0.2 * angle:
+            return None
+        if np.abs(step)[0] < 1e-14:
+            return float(_outside(point)[0])
+    return None
+
+
 def delay_margin_s(loop: ClosedLoop, crossings: tuple[Crossing, ...] | None = None) -> float | None:
     """Extra delay that makes the loop unstable.
 
@@ -915,6 +937,8 @@ def delay_margin_s(loop: ClosedLoop, crossings: tuple[Crossing, ...] | None = No
     -----
     Least ((180 deg + arg L) mod 360 deg)/w, confirmed by the poles of the loop that is sampled
     anew with the longer delay; where the poles disagree, the edge is found from them by bisection.
+    A margin of very many samples is confirmed by the one pole that reaches the circle, and told as
+    none when that pole does not.
     """
     if crossings is None:
         crossings = gain_crossings(loop)
@@ -922,11 +946,23 @@ def delay_margin_s(loop: ClosedLoop, crossings: tuple[Crossing, ...] | None = No
         return None
     value = min((c.margin_rad % (2.0 * math.pi)) / c.omega_rad_per_s for c in crossings)
 
-    def stable(extra_s: float) -> bool:
-        plant = loop.sampled
-        longer = sample(plant.space, plant.period_s, plant.delay_s + extra_s)
-        return is_stable(replace(loop, sampled=longer))
+    critical = min(crossings, key=lambda c: (c.margin_rad % (2.0 * math.pi)) / c.omega_rad_per_s)
+    plant = loop.sampled
 
+    def longer(extra_s: float) -> ClosedLoop:
+        return replace(loop, sampled=sample(plant.space, plant.period_s, plant.delay_s + extra_s))
+
+    def stable(extra_s: float) -> bool:
+        return is_stable(longer(extra_s))
+
+    if value > _MANY_SAMPLES * plant.period_s:
+        # The stored outputs would make a large matrix. The pole that reaches the circle is followed
+        # by itself: 1 + L knows the delay as a factor, not as states.
+        angle = critical.omega_rad_per_s * plant.period_s
+        inner, outer = (_pole_near(longer(x * value), angle) for x in (0.999, 1.001))
+        if inner is not None and outer is not None and inner < 0.0 < outer:
+            return value
+        return None
     if stable(0.999 * value) and not stable(1.001 * value):
         return value
     step = min(0.25 * loop.sampled.period_s, 0.1 * value)

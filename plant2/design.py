@@ -1641,7 +1641,9 @@ def controller_equations(task: Task, gains: Gains, word_bits: int) -> Equations:
     -----
     Laws and structure in docs/definitions.md. A notch runs on differences, n = n[1]
     + a2 (n[1] - n[2]) + sigma (s[1] - n[1]) + b0 (s - s[1]) - b2 (s[1] - s[2]), whose gain at
-    rest is 1 for any words, and whose slow poles keep their place in few bits (own derivation).
+    rest is 1 for any words; sigma has a format of its own, so that slow poles keep their frequency
+    in few bits (own derivation, in the spirit of delta forms: Middleton & Goodwin, IEEE TAC 31,
+    1986, from memory).
     """
     loop = task.loop
     sensor, actuator = loop.sensor, loop.actuator
@@ -1861,7 +1863,7 @@ def controller_equations(task: Task, gains: Gains, word_bits: int) -> Equations:
         )
         before = "demand_code"
         for i, s in enumerate(sections, 1):
-            rows += _notch_rows(i, s, before, limit, total)
+            rows += _notch_rows(i, s, before, limit, total, word_bits)
             before = f"notch{i}_code"
         rows.append(
             Equation(
@@ -1929,8 +1931,10 @@ def _windup_shift(gains: Gains, period_s: float) -> int:
     return max(1, min(16, round(math.log2(max(tracking_s / period_s, 2.0)))))
 
 
-def _notch_rows(number: int, s: Section, before: str, limit: float, reach: float) -> list[Equation]:
-    """Four equations of one notch on differences."""
+def _notch_rows(
+    number: int, s: Section, before: str, limit: float, reach: float, word_bits: int
+) -> list[Equation]:
+    """Equations of one notch on differences; a slow one pulls its output in steps below its own."""
     name = f"notch{number}"
     # In z: denominator z^2 + a1 z + a2, numerator b0 z^2 + b1 z + b2, equal sums sigma.
     a2 = 1.0 - s.p1 + s.p0
@@ -1938,6 +1942,23 @@ def _notch_rows(number: int, s: Section, before: str, limit: float, reach: float
     b2 = s.gain * (1.0 - s.z1 + s.z0)
     sigma = s.p0
     out = f"{name}_code"
+    pull = Term(signal=f"{name}_gap", coefficient=sigma, word=f"{name}_s")
+    extra: list[Equation] = []
+    if sigma < 2.0**-6:
+        # sigma is a few steps of the sum it would share with words near 1: a sum of its own, its
+        # rounding carried, keeps the frequency of the notch
+        extra = [
+            Equation(
+                name=f"{name}_pull",
+                meaning=f"what draws the output of notch {number} to its input",
+                unit="code",
+                terms=(pull,),
+                carry=True,
+                wide=True,
+                finer=(out, word_bits - 3),
+            )
+        ]
+        pull = Term(signal=f"{name}_pull")
     return [
         Equation(
             name=f"{name}_rise",
@@ -1956,6 +1977,7 @@ def _notch_rows(number: int, s: Section, before: str, limit: float, reach: float
             ),
             span=1.0,
         ),
+        *extra,
         Equation(
             name=out,
             meaning=f"output of notch {number}",
@@ -1963,7 +1985,7 @@ def _notch_rows(number: int, s: Section, before: str, limit: float, reach: float
             terms=(
                 Term(signal=out, lag=1),
                 Term(signal=f"{name}_move", lag=1, coefficient=a2, word=f"{name}_a2"),
-                Term(signal=f"{name}_gap", coefficient=sigma, word=f"{name}_s"),
+                pull,
                 Term(signal=f"{name}_rise", coefficient=b0, word=f"{name}_b0"),
                 Term(signal=f"{name}_rise", lag=1, coefficient=-b2, word=f"{name}_b2"),
             ),

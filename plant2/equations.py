@@ -96,6 +96,8 @@ class Equation:
     cut : tuple of (str, float) or None
         The signal may be limited at this factor times the named signal's limit without any
         effect on that signal. [unit per unit]
+    finer : tuple of (str, int) or None
+        A sum-wide signal has the fraction bits of the named signal and these more.
     spare_bits : int
         Bits of the word that the signal must leave free, for differences of it.
     settles : str
@@ -121,6 +123,7 @@ class Equation:
     span: float = 0.0
     reach: float = 0.0
     cut: tuple[str, float] | None = None
+    finer: tuple[str, int] | None = None
     spare_bits: int = 0
     settles: str = "zero"
     frac_bits: int | None = None

@@ -9,16 +9,38 @@ Rules of this file:
 from __future__ import annotations
 
 import json
+from dataclasses import dataclass
 
 from plant2.cautions import cautions
 from plant2.check import Report, as_json
 from plant2.emit import EmitFacts, RecordedStep, render, selfcheck_vectors
 from plant2.errors import Plant2Error
 from plant2.present import gains_text, requirement_text
+from plant2.proof import ProofError, as_plain, prove
 from plant2.quantity import format_si
 
 
-def firmware_files(report: Report, *, despite_misses: bool = False) -> dict[str, str]:
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Firmware:
+    """What an emission writes and tells.
+
+    Parameters
+    ----------
+    files : dict of str to str
+        File name to text.
+    told : str
+        What was proven, in one line.
+
+    Notes
+    -----
+    Nothing is written here.
+    """
+
+    files: dict[str, str]
+    told: str
+
+
+def firmware_files(report: Report, *, despite_misses: bool = False) -> Firmware:
     """All emitted files of a checked loop, as text.
 
     Parameters
@@ -30,13 +52,15 @@ def firmware_files(report: Report, *, despite_misses: bool = False) -> dict[str,
 
     Returns
     -------
-    dict of str to str
-        File name to text.
+    Firmware
+        Files and what was proven of them.
 
     Raises
     ------
     Plant2Error
         If a requirement is missed and marks were not asked for, or there are no words.
+    ProofError
+        If the C text is not proven equal to the words for every state and input.
 
     Notes
     -----
@@ -76,5 +100,22 @@ def firmware_files(report: Report, *, despite_misses: bool = False) -> dict[str,
         codes=tuple(int(v) for v in record.codes[:samples, lane]),
     )
     vectors = selfcheck_vectors(controller, closed_loop=recorded)
-    text = json.dumps(as_json(report, command="emit", with_words=True), indent=2, allow_nan=False)
-    return render(controller, facts, vectors, text + "\n")
+    evidence_name = f"{controller.name}_check.json"
+    files = render(controller, facts, vectors, "{}\n")
+    proof = prove(files[f"{controller.name}.c"], files[f"{controller.name}.h"], controller)
+    if not proof.proven:
+        raise ProofError(
+            f"{controller.name}.c",
+            None,
+            "",
+            f"is not proven equal to the checked words: {proof.first_failure}",
+            "nothing is written; this is a defect of plant2",
+        )
+    data = as_json(report, command="emit", with_words=True)
+    data["proof"] = as_plain(proof)
+    files[evidence_name] = json.dumps(data, indent=2, allow_nan=False) + "\n"
+    told = (
+        f"proof: {len(proof.obligations)} statements about the C text hold for every stored state "
+        f"and every input ({proof.solver} {proof.solver_version})"
+    )
+    return Firmware(files=files, told=told)

@@ -592,7 +592,7 @@ def report(console: Console, outcome: Report) -> None:
         console.print(f"caution: {sentence}", markup=False, style="dim")
 
 
-def written(console: Console, folder: Path, files: Mapping[str, str]) -> None:
+def written(console: Console, folder: Path, files: Mapping[str, str], told: str) -> None:
     """Which files were written.
 
     Parameters
@@ -603,9 +603,12 @@ def written(console: Console, folder: Path, files: Mapping[str, str]) -> None:
         Where they are.
     files : mapping of str to str
         Name to text.
+    told : str
+        What was proven of them.
 
     Notes
     -----
     Layout only.
     """
+    console.print(told, markup=False, soft_wrap=True)
     console.print(f"wrote {', '.join(files)} into {folder}", markup=False, soft_wrap=True)

@@ -132,6 +132,10 @@ def _word_formats(equations: Equations, word_bits: int) -> dict[str, _Format]:
             size = other.limit[1] / 2.0**other.frac_bits * e.cut[1] * 2.0**mine.frac_bits
             reach = min(mine.limit[1], math.ceil(size) + 1)
             mine.limit = (-reach, reach)
+    for e in equations.update:
+        if e.finer is not None:
+            frac = formats[e.finer[0]].frac_bits + e.finer[1]
+            formats[e.name] = _Format(frac_bits=frac, limit=None)
     return formats
 
 

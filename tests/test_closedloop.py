@@ -103,6 +103,25 @@ def test_delay_margin_is_confirmed_by_poles() -> None:
     assert delay_margin_s(reference_loop("pid")) == pytest.approx(1.4892302485427e-3, rel=1e-4)
 
 
+@pytest.mark.parametrize("law", ["pd", "pid"])
+def test_long_delay_margins_are_confirmed_by_one_pole(
+    law: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Beyond 60 samples the matrix is not assembled; both ways agree where both can be had."""
+    loop = reference_loop(law)
+    by_matrix = delay_margin_s(loop)
+    monkeypatch.setattr("plant2.closedloop._MANY_SAMPLES", 0)
+    assert delay_margin_s(loop) == by_matrix
+    monkeypatch.setattr("plant2.closedloop._pole_near", lambda loop, angle: -1.0)
+    assert delay_margin_s(loop) is None
+
+
+def test_poles_at_zero_have_a_logarithm() -> None:
+    """z = 0 decays at once: minus infinity, and no warning."""
+    s = log_pole(np.array([-1.0 + 0j, -1.0 + 1e-12]), 1e-4)
+    assert s.real[0] == -math.inf and s.real[1] < -1e5
+
+
 def test_gain_edges_are_edges() -> None:
     loop = reference_loop("pid")
     low, high = gain_edges(loop)

@@ -10,13 +10,14 @@ import math
 from dataclasses import replace
 from fractions import Fraction
 
+import numpy as np
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from loops import PID, lead_loop, reference_loop
 
 from plant2.chain import built_closed_loop
-from plant2.closedloop import pair_figures, poles_delta
+from plant2.closedloop import log_pole, pair_figures, poles_delta
 from plant2.design import TAU, Gains, Task, controller_of, design, place_gains, task_of
 from plant2.equations import WordController, from_plain, to_plain, transfer, verify_ranges
 from plant2.errors import DesignError, OutOfRangeError
@@ -43,6 +44,10 @@ VARIANTS: dict[str, Loop] = {
     "rest_and_bias": reference_loop('plant.rest_position="0.3 mm"', 'plant.bias_force="-2 N"'),
 }
 VARIANTS["notch"] = replace(VARIANTS["pd"], aim=replace(VARIANTS["pd"].aim, notches=(NOTCH,)))
+_FAST = reference_loop('processor.sample_rate="40 kHz"', 'processor.delay="40 us"')
+VARIANTS["slow_notch"] = replace(
+    _FAST, aim=replace(_FAST.aim, notches=(replace(NOTCH, frequency_rad_per_s=TAU * 700),))
+)
 VARIANTS["pid_two_notches"] = replace(
     VARIANTS["pid"],
     aim=replace(
@@ -96,8 +101,6 @@ def test_transfer_functions_of_the_words(case: tuple[Task, Gains, Words]) -> Non
 
 
 def _value(num: object, den: object, point: complex) -> complex:
-    import numpy as np
-
     return complex(np.polyval(num, point) / np.polyval(den, point))  # type: ignore[call-overload]
 
 
@@ -237,6 +240,23 @@ def test_as_built_pair_is_near_the_design(rate: str, bits: int, tolerance: float
     zeta, omega = pair_figures((complex(pair), complex(pair.conjugate())), task.period_s)
     assert omega == pytest.approx(TAU * 60, rel=tolerance)
     assert zeta == pytest.approx(0.8, rel=tolerance)
+
+
+@pytest.mark.parametrize(("hz", "rate"), [(20, "10 kHz"), (40, "20 kHz"), (200, "20 kHz")])
+def test_a_slow_notch_keeps_its_frequency_in_16_bits(hz: float, rate: str) -> None:
+    """The shift form in 16 bits moves the first two by -12 % and more."""
+    base = reference_loop(f"processor.sample_rate={rate}", 'processor.delay="30 us"')
+    notch = Notch(frequency_rad_per_s=TAU * hz, width=0.3, depth_db=20.0)
+    task = task_of(replace(base, aim=replace(base.aim, notches=(notch,))))
+    gains = replace(built("pd", 32)[1], kp=3000.0, kd=15.0)
+    found = transfer(words_of(task, gains, 16).controller).in_delta()
+    s = log_pole(np.roots(found.denominator).astype(complex), task.period_s)
+    pole = s[np.argmax(s.imag)]
+    assert abs(pole) == pytest.approx(TAU * hz, rel=1e-4)
+    assert -pole.real / abs(pole) == pytest.approx(0.15, rel=0.02)
+    z = log_pole(np.roots(found.position).astype(complex), task.period_s)
+    zero = z[np.argmax(z.imag)]
+    assert abs(zero) == pytest.approx(TAU * hz, rel=1e-4)
 
 
 @settings(
