@@ -44,6 +44,7 @@ FLOORS: tuple[tuple[int, str], ...] = (
     (4, "bounds"),
     (4, "words"),
     (4, "simulate"),
+    (4, "attack"),
     (5, "emit"),
     (5, "proof"),
     (5, "chain"),
@@ -176,7 +177,8 @@ def owners(source: Source) -> Iterator[str]:
         if known:
             allowed = OWNERS[max(known, key=len)]
             if source.name not in allowed:
-                yield at(source, node, f"imports {imported}, owned by {', '.join(allowed) or 'nobody'}")
+                owner = ", ".join(allowed) or "nobody"
+                yield at(source, node, f"imports {imported}, owned by {owner}")
         elif top not in FREE | {"plant2"} and top not in sys.stdlib_module_names:
             yield at(source, node, f"imports {top}, which has no owner in the table")
 
