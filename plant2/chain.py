@@ -46,7 +46,7 @@ from plant2.loopfile import Loop
 from plant2.plant import holding_effort
 from plant2.response import StepFigures, Trajectory, step_figures, trajectory_of_samples
 from plant2.simulate import CheckedStep, checked_step
-from plant2.words import WordError, Words, words_of
+from plant2.words import Words, words_of
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -567,23 +567,3 @@ def _without_words(
         notes=notes,
         word_faults=word_faults,
     )
-
-
-def word_errors(evidence: Evidence) -> tuple[WordError, ...]:
-    """Errors of the words against the real coefficients.
-
-    Parameters
-    ----------
-    evidence : Evidence
-        With words.
-
-    Returns
-    -------
-    tuple of WordError
-        Empty where the words came from elsewhere.
-
-    Notes
-    -----
-    See `plant2.words.WordError`.
-    """
-    return () if evidence.words is None else evidence.words.errors

@@ -26,7 +26,6 @@ from plant2.closedloop import (
     circle,
     gain_crossings,
     log_pole,
-    pair_figures,
     poles_delta,
     step_shares,
 )
@@ -35,7 +34,6 @@ from plant2.errors import DesignError, OutOfRangeError
 from plant2.loopfile import Loop, Notch
 from plant2.plant import (
     Plant,
-    constant_force,
     holding_effort,
     plant_of,
     state_space,
@@ -2027,46 +2025,3 @@ def resting_coefficients(task: Task) -> tuple[float, float]:
     zero = holding_effort(task.plant, 0.0)
     slope = (holding_effort(task.plant, step) - zero) / ka if task.plant.stiffness else 0.0
     return slope, zero / ka
-
-
-def placed_figures(task: Task, pair: tuple[complex, complex]) -> tuple[float, float]:
-    """Damping ratio and natural frequency of a pair.
-
-    Parameters
-    ----------
-    task : Task
-        Sample period.
-    pair : tuple of complex
-        z - 1. [-]
-
-    Returns
-    -------
-    tuple of float
-        Damping ratio [-], natural frequency [Hz].
-
-    Notes
-    -----
-    See `plant2.closedloop.pair_figures`.
-    """
-    zeta, omega = pair_figures(pair, task.period_s)
-    return zeta, omega / TAU
-
-
-def spring_and_bias(task: Task) -> float:
-    """Constant force on the main mass from the spring's rest position and the bias. [N or N m]
-
-    Parameters
-    ----------
-    task : Task
-        Plant.
-
-    Returns
-    -------
-    float
-        k x rest position + bias. [N or N m]
-
-    Notes
-    -----
-    See `plant2.plant.constant_force`.
-    """
-    return constant_force(task.plant)

@@ -87,11 +87,6 @@ class _Format:
     limit: Range | None
     low: int = 0
     high: int = 0
-    known: bool = False
-
-
-def _floor(value: float) -> int:
-    return math.floor(value * (1.0 + 1e-12)) if value > 0 else math.floor(value)
 
 
 def _word_formats(equations: Equations, word_bits: int) -> dict[str, _Format]:
@@ -218,10 +213,10 @@ class _Builder:
         self.formats = _word_formats(equations, word_bits)
         for name in equations.inputs:
             low, high = _type_range(word_bits)
-            self.formats[name] = _Format(frac_bits=0, limit=None, low=low, high=high, known=True)
+            self.formats[name] = _Format(frac_bits=0, limit=None, low=low, high=high)
         for f in self.formats.values():
             if f.limit is not None:
-                f.low, f.high, f.known = f.limit[0], f.limit[1], True
+                f.low, f.high = f.limit
 
     def ranges(self, e: Equation) -> dict[str, Range]:
         return {
@@ -278,7 +273,7 @@ class _Builder:
                 self.difference_format(e)
         f = self.formats[e.name]
         if f.limit is not None:
-            f.low, f.high, f.known = f.limit[0], f.limit[1], True
+            f.low, f.high = f.limit
         if e.wide and e.limit is not None:
             return self.integral(e, f)
         ranges = self.ranges(e)
@@ -354,7 +349,6 @@ class _Builder:
         else:
             # what was promised to earlier readers is the limit itself
             low, high = equation.limit
-        f.known = True
         width = _type_range(self.sum_bits if equation.wide else self.word_bits)
         if low < width[0] or high > width[1]:
             raise no_design(
