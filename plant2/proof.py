@@ -48,9 +48,9 @@ from plant2.errors import Plant2Error
 INT_BITS = (16, 32)
 """Widths of ``int`` that the text is proven for. [bit]"""
 
-STEPS_LIMIT = 20_000_000
-"""What the solver may spend on one statement, in its own count of steps, so that the answer does
-not depend on the machine."""
+STEPS_LIMIT = 1_000_000
+"""What the solver may spend on one question, in its own count of steps, so that the answer does not
+depend on the machine. Text as it is emitted takes a few thousand."""
 
 SECONDS_LIMIT = 20
 """A second fence, for steps that take uncommonly long. [s]"""
@@ -280,8 +280,12 @@ def _without_comments(text: str, file: str) -> str:
     rest = 0
     while (start := text.find("/*", rest)) >= 0:
         end = text.find("*/", start + 2)
+        place = f"{file}:{text[:start].count(chr(10)) + 1}"
         if end < 0:
-            raise _refuse(f"{file}:{text[:start].count(chr(10)) + 1}", "a comment has no end")
+            raise _refuse(place, "a comment has no end")
+        if text[text.rfind("\n", 0, start) + 1 : start].lstrip().startswith("#"):
+            # It would draw the lines after it into the one of the preprocessor.
+            raise _refuse(place, "a comment in a line for the preprocessor")
         pieces += [text[rest:start], " ", "\n" * text.count("\n", start, end)]
         rest = end + 2
     pieces.append(text[rest:])
@@ -297,7 +301,7 @@ def _plain_code(text: str, file: str, frame: Sequence[str]) -> str:
     waiting = list(frame)
     code = False
     for number, line in enumerate(lines):
-        words = " ".join(line.split())
+        words = line.strip(" \t")
         place = f"{file}:{number + 1}"
         if waiting and words == waiting[0]:
             waiting.pop(0)
@@ -890,11 +894,20 @@ class _Walker:
         yes = None if holds is None else self.value(node.iftrue, holds)
         no = None if fails is None else self.value(node.iffalse, fails)
         if yes is None or no is None:
-            only = yes if no is None else no
+            # What is never evaluated still has its say in the type (C99 6.5.15).
+            only, other = (yes, node.iffalse) if no is None else (no, node.iftrue)
             assert only is not None
-            return replace(only, bits=self.promoted(only))
+            bits = max(self.promoted(only), self.promoted(self.unevaluated(other, frame)))
+            return replace(only, bits=bits)
         bits = max(self.promoted(yes), self.promoted(no))
         return replace(self.joined(term, yes, no), bits=bits)
+
+    def unevaluated(self, node: Any, frame: _Frame) -> _Value:
+        """A value of which only the type counts."""
+        kept = list(self.alarms), self.operations, self.tightest
+        value = self.value(node, frame)
+        self.alarms, self.operations, self.tightest = kept
+        return value
 
     # calls
 
@@ -958,10 +971,13 @@ class _Walker:
     def run(self, frame: _Frame) -> _Value | None:
         """Walk through a function's body."""
         function = frame.function
-        for statement in function.body:
-            if frame.done:
+        for before, statement in zip(function.body, function.body[1:], strict=False):
+            if type(before).__name__ == "Return":
                 raise _refuse(_place(statement), "a statement that is never reached")
+        for statement in function.body:
             self.statement(statement, frame)
+            if frame.done:
+                break
         if frame.result is None and function.returns != "void":
             raise _refuse(function.place, f"{function.name} may end without a return")
         result = frame.result
