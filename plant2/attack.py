@@ -620,3 +620,226 @@ def _steered(
     if bool(pair.limited.any()):
         return 0.0, 0.0
     return float(pair.largest.max()), float(pair.at_samples.max())
+
+
+# --------------------------------------------------------------------------------------------------
+# Rest
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SeenLimitCycle:
+    """Largest motion at rest that was seen, with everything standing still.
+
+    Parameters
+    ----------
+    count : float
+        Half the peak-to-peak position, between the samples too. [count]
+    position : float
+        The same. [m or rad]
+    period_s : float or None
+        Time between upward crossings of its middle, on average; None where it is at rest or drifts.
+        [s]
+    reference : int
+        Raw reference of that lane. [count]
+    force : float
+        Its constant force beside bias and spring. [N or N m]
+    median : float
+        Median over the lanes. [count]
+    moving : float
+        Share of lanes whose codes still change. [-]
+    lanes, samples : int
+        How many lanes, and samples that were looked at after the decay.
+    limited_lanes : int
+        Lanes in which something was limited at the end; they are left out.
+
+    Notes
+    -----
+    See `seen_limit_cycle`.
+    """
+
+    count: float
+    position: float
+    period_s: float | None
+    reference: int
+    force: float
+    median: float
+    moving: float
+    lanes: int
+    samples: int
+    limited_lanes: int
+
+
+class _Rest:
+    """The loop as built around the linear plant, without noise."""
+
+    def __init__(
+        self,
+        task: Task,
+        controller: WordController,
+        start: Words,
+        offset: Real,
+        force: Real,
+        phases: int,
+    ) -> None:
+        self.task, self.controller = task, controller
+        sampled, space = task.sampled, task.sampled.space
+        sensor, actuator = task.loop.sensor, task.loop.actuator
+        self.words = LaneController(controller, len(start))
+        code = self.words.resting_output(start)
+        self.words.reset(start, code)
+        self.force = force + constant_force(task.plant)
+        position = (start - sensor.zero_count + offset) / task.count_per_position
+        effort = (code - actuator.zero_code) * task.effort_per_code
+        self.states = resting_state(
+            space, position=position, effort=effort, force=self.force
+        ).T.copy()
+        self.efforts = [_real(effort)] * (sampled.whole_delay + 2)
+        self.code = code
+        early = sampled.fraction * sampled.period_s
+        self.early = propagate(space, early) if early > 0.0 else None
+        self.looks = [
+            (t > early, propagate(space, t - early if t > early else t))
+            for t in (sampled.period_s * i / phases for i in range(1, phases))
+        ]
+        self.looking = False
+        self.limited: Flags = np.zeros(len(start), dtype=bool)
+        self.changed: Flags = np.zeros(len(start), dtype=bool)
+        self.low, self.high = np.full(len(start), math.inf), np.full(len(start), -math.inf)
+
+    def look(self) -> None:
+        """From here on extremes are kept."""
+        self.looking = True
+
+    def sample(self, reference: Words) -> Real:
+        """One update and the way to the next sample; returns the position before. [count]"""
+        task, sampled = self.task, self.task.sampled
+        sensor, d = task.loop.sensor, task.sampled.whole_delay
+        seen = (sampled.c_measured * task.count_per_position) @ self.states + sensor.zero_count
+        counts = np.floor(seen + 0.5).astype(np.int64)
+        counts = np.clip(counts, sensor.low_count, sensor.high_count)
+        code = self.words.update(reference, counts)
+        effort = _real((code - task.loop.actuator.zero_code) * task.effort_per_code)
+        self.efforts = [effort, *self.efforts[:-1]]
+        row = sampled.c_position * task.count_per_position
+        here: Real = row @ self.states
+        if self.looking:
+            self._look(row, here, code)
+        self.code = code
+        self.states += (
+            sampled.psi @ self.states
+            + np.outer(sampled.gamma0, self.efforts[d])
+            + np.outer(sampled.gamma1, self.efforts[d + 1])
+            + np.outer(sampled.gamma_force, self.force)
+        )
+        return here
+
+    def _look(self, row: Real, here: Real, code: Words) -> None:
+        self.changed |= code != self.code
+        self.limited = _at_limits(self.controller, self.words.signals, self.limited)
+        positions = [here]
+        old = self.efforts[self.task.sampled.whole_delay + 1]
+        new = self.efforts[self.task.sampled.whole_delay]
+        at_update = self.states
+        if self.early is not None:
+            at_update = self._later(self.states, self.early, old)
+        for late, step in self.looks:
+            base, effort = (at_update, new) if late else (self.states, old)
+            positions.append(row @ self._later(base, step, effort))
+        for position in positions:
+            self.low = np.minimum(self.low, position)
+            self.high = np.maximum(self.high, position)
+
+    def _later(self, states: Real, step: tuple[Real, Real, Real], effort: Real) -> Real:
+        psi, gain, gain_force = step
+        return _real(
+            states + psi @ states + np.outer(gain, effort) + np.outer(gain_force, self.force)
+        )
+
+
+def seen_limit_cycle(
+    task: Task,
+    controller: WordController,
+    *,
+    reference: float,
+    settle: int,
+    samples: int,
+    lanes: int = 256,
+    phases: int = 4,
+    seed: int = 1,
+) -> SeenLimitCycle:
+    """Search for the largest motion at rest, over references, starts and constant forces.
+
+    Parameters
+    ----------
+    task : Task
+        Plant and scales.
+    controller : WordController
+        The words.
+    reference : float
+        References stand still within this distance of sensor zero. [m or rad]
+    settle : int
+        Samples before the motion is looked at, at least 1.
+    samples : int
+        Samples in which it is looked at, at least 2.
+    lanes : int
+        Number of rest states, at least 1.
+    phases : int
+        Instants per period at which the position is looked at.
+    seed : int
+        Of the rest states.
+
+    Returns
+    -------
+    SeenLimitCycle
+        The largest motion; an estimate from below, no bound.
+
+    Raises
+    ------
+    OutOfRangeError
+        If there are too few samples or lanes.
+
+    Notes
+    -----
+    Every lane has a reference of its own, a start up to a few counts away from it, and a constant
+    force of up to one code and one count of holding force, so that every sub-count place of rest
+    can occur. A motion that needs longer than `settle` samples to show is not seen, and one that
+    drifts counts with what it drifts.
+    """
+    if settle < 1 or samples < 2 or lanes < 1:
+        raise OutOfRangeError("samples", samples, "", "must be at least 2", "ask for a longer run")
+    rng = np.random.default_rng(seed)
+    sensor, scale = task.loop.sensor, abs(task.count_per_position)
+    reach = math.floor(reference * scale)
+    near = np.where(np.arange(lanes) < lanes // 4, min(reach, 3), reach)
+    wanted = sensor.zero_count + rng.integers(-near, near + 1)
+    kick = np.rint(rng.normal(0.0, 1.0, lanes) * 10.0 ** rng.uniform(-1.0, 1.0, lanes))
+    start = np.clip(wanted + kick.astype(np.int64), sensor.low_count, sensor.high_count)
+    code_force = abs(task.effort_per_code) * (task.force_limit / task.effort_limit)
+    count_force = task.plant.stiffness / scale
+    force = rng.uniform(-1.0, 1.0, lanes) * (code_force + count_force)
+    rest = _Rest(task, controller, start, rng.uniform(-0.5, 0.5, lanes), force, phases)
+    for _ in range(settle):
+        rest.sample(wanted)
+    rest.look()
+    track = np.empty((samples, lanes))
+    for k in range(samples):
+        track[k] = rest.sample(wanted)
+    half = 0.5 * (rest.high - rest.low)
+    free = ~rest.limited
+    best = int(np.argmax(np.where(free, half, -1.0)))
+    seen = float(half[best]) if free.any() else 0.0
+    above = track[:, best] > 0.5 * (rest.high[best] + rest.low[best])
+    ups = np.flatnonzero(above[1:] & ~above[:-1])
+    period = float(ups[-1] - ups[0]) / (len(ups) - 1) if len(ups) > 1 else None
+    return SeenLimitCycle(
+        count=seen,
+        position=seen / scale,
+        period_s=None if period is None else period * task.period_s,
+        reference=int(wanted[best]),
+        force=float(force[best]),
+        median=float(np.median(half[free])) if free.any() else 0.0,
+        moving=float(np.mean(rest.changed)),
+        lanes=lanes,
+        samples=samples,
+        limited_lanes=int(np.count_nonzero(~free)),
+    )
