@@ -112,6 +112,8 @@ def firmware_files(report: Report, *, despite_misses: bool = False) -> Firmware:
             "nothing is written; this is a defect of plant2",
         )
     data = as_json(report, command="emit", with_words=True)
+    data["units"] = {"position": facts.position_unit, "code": facts.code_unit}
+    data["cautions"] = list(facts.cautions)
     data["marks"] = list(marks)
     data["proof"] = as_plain(proof)
     files[evidence_name] = json.dumps(data, indent=2, allow_nan=False) + "\n"

@@ -18,6 +18,16 @@
  * output_code      1 code     112 .. 912       word
  * excess           1 code     -8744 .. 8744    word
  *
+ * Sample rate 2 kHz; the new code acts 600 us after the sampling instant.
+ * Position and reference: 0.5 um per count. Code: 2 mA per code.
+ * Law: pd
+ *
+ * Every value of the type is allowed. What lies outside acts as if clipped to
+ *   - reference: 140 .. 3940 count
+ *   - position: 0 .. 4095 count
+ *   - added: -1023 .. 1023 code
+
+ *
  * Loop file, SHA-256: a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5
  * This file may be used without conditions.
  */

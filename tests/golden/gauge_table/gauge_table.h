@@ -17,6 +17,7 @@
  *   - Then, every sample: measure, call gauge_table_update, put the returned code out at once.
  *   - Begin with the reference at the measured position and move it from there in a ramp.
  *   - After any pause in the calls begin again with gauge_table_reset.
+
  *
  * Loop file, SHA-256: a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5a5
  * This file may be used without conditions.

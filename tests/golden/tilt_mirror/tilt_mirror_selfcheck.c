@@ -10,6 +10,18 @@
  * whose words differ. Run it once on the processor that is used, built as the product is built. It
  * calls nothing but the functions of tilt_mirror.h and keeps its stored words in constant memory.
  *
+ * Sample rate 8 kHz; the new code acts 40 us after the sampling instant.
+ * Position and reference: 12 urad per count. Code: 0.4 mA per code.
+ * Law: pid with one notch
+ *
+ * Every value of the type is allowed. What lies outside acts as if clipped to
+ *   - reference: -2048 .. 2047 count
+ *   - position: -2048 .. 2047 count
+ *   - added: -2047 .. 2047 code
+ *
+ * Cautions
+ *   - Keep the beam enclosed until the loop has been seen to hold.
+ *
  * Asked for beside it: --set aim.law=pid, --despite-misses
  * This file may be used without conditions.
  */

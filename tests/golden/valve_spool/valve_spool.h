@@ -17,6 +17,7 @@
  *   - Then, every sample: measure, call valve_spool_update, put the returned code out at once.
  *   - Begin with the reference at the measured position and move it from there in a ramp.
  *   - After any pause in the calls begin again with valve_spool_reset.
+
  *
  * Loop file, SHA-256: 0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f0f
  * This file may be used without conditions.
