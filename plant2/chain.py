@@ -41,7 +41,7 @@ from plant2.design import (
     task_of,
 )
 from plant2.equations import WordController, transfer
-from plant2.errors import DesignError
+from plant2.errors import DesignError, OutOfRangeError
 from plant2.loopfile import Loop
 from plant2.plant import holding_effort
 from plant2.response import StepFigures, Trajectory, step_figures, trajectory_of_samples
@@ -51,6 +51,9 @@ from plant2.words import Words, words_of
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Progress = Callable[[float], None]
+
+LONGEST_STEP = 1_000_000
+"""Samples that a checked step may take: about a minute and a half on a small machine."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -182,6 +185,11 @@ def horizon_samples(loop: Loop, closed: ClosedLoop, poles: Complex) -> int:
     int
         Samples.
 
+    Raises
+    ------
+    OutOfRangeError
+        If the step would take more than a million samples.
+
     Notes
     -----
     10 x the slowest time constant of share above 0.1 %, at least 3 x the settling time limit, and
@@ -190,6 +198,19 @@ def horizon_samples(loop: Loop, closed: ClosedLoop, poles: Complex) -> int:
     samples = 10.0 * _slowest_samples(closed, poles)
     if loop.limits.settling_time_s is not None:
         samples = max(samples, 3.0 * loop.limits.settling_time_s * loop.processor.sample_rate_hz)
+    if samples > LONGEST_STEP:
+        slow = (
+            "the slowest pole of the loop"
+            if loop.limits.settling_time_s is None
+            else ("limits.settling_time or the slowest pole of the loop")
+        )
+        raise OutOfRangeError(
+            "the checked step",
+            samples,
+            "samples",
+            f"must be at most {LONGEST_STEP}: {slow} asks for more",
+            "shorten the limit, speed up the integral, or lower the sample rate",
+        )
     return max(50 + 2 * closed.sampled.whole_delay, math.ceil(samples))
 
 
