@@ -234,6 +234,7 @@ def test_new_writes_a_file_that_checks(tmp_path: Path) -> None:
         ("[plant]", "[plnt]", ("plnt", "plant")),
         ('law = "pd"', 'law = "pdd"', ("law", "pid")),
         ("damping_ratio = 0.8", "damping_ratio = 0", ("damping_ratio",)),
+        ('"8 ms"', '"8000 s"', ("samples", "settling_time")),
     ],
 )
 def test_slips_are_told_with_the_line_to_write(
