@@ -764,13 +764,13 @@ def verify_ranges(controller: WordController) -> None:
     -----
     The box of stored words is inductive: every state in it and every input lead back into it.
     """
-    type_range = _type_range(controller.word_bits)
+    word_range = type_range(controller.word_bits)
     states = {s.name: s for s in controller.state}
 
     def run(
         equations: tuple[WordEquation, ...], inputs: tuple[str, ...]
     ) -> dict[str, tuple[int, int]]:
-        ranges = dict.fromkeys(inputs, type_range)
+        ranges = dict.fromkeys(inputs, word_range)
         bits = dict.fromkeys(inputs, 0)
         # lagged reads see any value in the stored range
         for e in equations:
@@ -781,13 +781,13 @@ def verify_ranges(controller: WordController) -> None:
                 if t.word_frac_bits + bits[t.signal] + t.lift != e.sum_frac_bits:
                     _refuse(f"{e.name}: term {t.name or t.signal}", 0, "formats do not add up")
                 if t.word is not None:
-                    if not type_range[0] <= t.word <= type_range[1]:
+                    if not word_range[0] <= t.word <= word_range[1]:
                         _refuse(f"{e.name}: word {t.name}", t.word, "does not fit a word")
                     read = next((x for x in equations if x.name == t.signal), None)
                     if read is not None and read.wide:
                         _refuse(f"{e.name}: {t.signal}", 0, "a product reads a sum-wide signal")
             whole, partial = partial_sum_range(e, ranges)
-            limit = _type_range(controller.sum_bits)
+            limit = type_range(controller.sum_bits)
             if partial[0] < limit[0] or partial[1] > limit[1]:
                 _refuse(f"{e.name}: sum", max(-partial[0], partial[1]), "a partial sum overflows")
             if partial[0] < e.sum_low or partial[1] > e.sum_high:
@@ -795,7 +795,7 @@ def verify_ranges(controller: WordController) -> None:
             low, high = signal_range(e, whole)
             if low < e.low or high > e.high:
                 _refuse(e.name, max(-low, high), "leaves its stated range")
-            width = _type_range(controller.sum_bits if e.wide else controller.word_bits)
+            width = type_range(controller.sum_bits if e.wide else controller.word_bits)
             if e.low < width[0] or e.high > width[1]:
                 _refuse(e.name, max(-e.low, e.high), "does not fit its type")
         return ranges
@@ -823,7 +823,23 @@ def _refuse(name: str, value: int, rule: str) -> None:
     raise OutOfRangeError(name, float(value), "", rule, "this is a defect of the word equations")
 
 
-def _type_range(bits: int) -> tuple[int, int]:
+def type_range(bits: int) -> tuple[int, int]:
+    """Least and most of a signed type.
+
+    Parameters
+    ----------
+    bits : int
+        Width of the type. [bit]
+
+    Returns
+    -------
+    tuple of int
+        (-2^(bits-1), 2^(bits-1) - 1).
+
+    Notes
+    -----
+    Two's complement, as the exact-width types of C99 7.18.1.1 are.
+    """
     return -(1 << (bits - 1)), (1 << (bits - 1)) - 1
 
 

@@ -21,7 +21,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from plant2.design import settling_band
-from plant2.equations import WordController, WordEquation, verify_ranges
+from plant2.equations import WordController, WordEquation, type_range, verify_ranges
 from plant2.errors import OutOfRangeError
 from plant2.plant import Plant, StateSpace, constant_force, state_space
 from plant2.response import (
@@ -71,12 +71,8 @@ def _refuse_word(name: str, value: int, low: int, high: int) -> None:
     )
 
 
-def _type_range(bits: int) -> tuple[int, int]:
-    return -(1 << (bits - 1)), (1 << (bits - 1)) - 1
-
-
 def _check_argument(name: str, value: int, bits: int) -> None:
-    low, high = _type_range(bits)
+    low, high = type_range(bits)
     if not low <= value <= high:
         raise OutOfRangeError(
             name,
@@ -353,7 +349,7 @@ class LaneController:
         self._signals = {e.name: self._fresh() for e in controller.update}
         self._added_is_zero = True
         self._excess = self._state[_excess_word(controller)]
-        self._low, self._high = _type_range(controller.word_bits)
+        self._low, self._high = type_range(controller.word_bits)
 
         places = _places(controller)
         lagged = {key: self._state[name] for key, name in places.items()}

@@ -25,6 +25,7 @@ from plant2.equations import (
     WordTerm,
     partial_sum_range,
     signal_range,
+    type_range,
     verify_ranges,
 )
 
@@ -142,10 +143,6 @@ def _ceil_bits(value: float, frac: int) -> int:
     return math.ceil(value * 2.0**frac)
 
 
-def _type_range(bits: int) -> Range:
-    return -(1 << (bits - 1)), (1 << (bits - 1)) - 1
-
-
 def _words_of(
     e: Equation,
     sum_frac: int,
@@ -212,7 +209,7 @@ class _Builder:
         self.sum_bits = 2 * word_bits
         self.formats = _word_formats(equations, word_bits)
         for name in equations.inputs:
-            low, high = _type_range(word_bits)
+            low, high = type_range(word_bits)
             self.formats[name] = _Format(frac_bits=0, limit=None, low=low, high=high)
         for f in self.formats.values():
             if f.limit is not None:
@@ -225,7 +222,7 @@ class _Builder:
 
     def fits(self, equation: WordEquation, ranges: Mapping[str, Range]) -> bool:
         _, partial = partial_sum_range(equation, ranges)
-        low, high = _type_range(self.sum_bits)
+        low, high = type_range(self.sum_bits)
         return partial[0] >= low and partial[1] <= high
 
     def difference_format(self, e: Equation) -> None:
@@ -349,7 +346,7 @@ class _Builder:
         else:
             # what was promised to earlier readers is the limit itself
             low, high = equation.limit
-        width = _type_range(self.sum_bits if equation.wide else self.word_bits)
+        width = type_range(self.sum_bits if equation.wide else self.word_bits)
         if low < width[0] or high > width[1]:
             raise no_design(
                 f"{equation.name}: its range does not fit {self.word_bits}-bit words; use word = 32"
@@ -526,8 +523,8 @@ def _reset(
     words = {e.name: e for e in update}
     position = words["position_count"]
     limit = actuator.limit_code
-    type_range = _type_range(builder.word_bits)
-    ranges: dict[str, Range] = {"position": type_range, "output": type_range}
+    whole = type_range(builder.word_bits)
+    ranges: dict[str, Range] = {"position": whole, "output": whole}
     rows = [position]
     ranges["position_count"] = (position.low, position.high)
     sign = actuator.polarity
