@@ -148,16 +148,52 @@ def _powers(a: Any, slowest: float) -> tuple[tuple[Real, Real], ...]:
     return tuple(out)
 
 
-def _samples_for(a: Real) -> float:
-    """Samples in which the slowest pole decays to nothing; infinite where it does not."""
-    if not a.size:
-        return 1.0
-    largest = float(np.abs(np.linalg.eigvals(_evened(a))).max())
-    if largest >= 1.0 - 1e-12:
-        return math.inf
-    if largest < 1e-3:
-        return 8.0 * len(a)
-    return _ENOUGH / -math.log(largest) + 4.0 * len(a)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Pace:
+    """How long impulse responses are, and a slow real pole whose end is summed in closed form."""
+
+    samples: float  # of what is summed as it comes; infinite where something does not decay
+    whole: float  # of everything
+    rate: float  # the slow pole, or 0
+    right: Real  # its direction, or 0
+    left: Real  # its share of a state, left . right = 1
+
+
+def _pace(a: Real, *, closed: bool = True) -> _Pace:
+    """Samples in which all poles, or all but one slow real one, decay to nothing.
+
+    Estimates only: what they are wrong by is bounded where they are used.
+    """
+    n = len(a)
+    nothing = _Pace(samples=1.0, whole=1.0, rate=0.0, right=np.zeros(n), left=np.zeros(n))
+    if not n:
+        return nothing
+    scale = _even_scale(a)
+    even = a * (scale / scale[:, np.newaxis])
+    values, vectors = np.linalg.eig(even)
+    order = np.argsort(-np.abs(values))
+
+    def samples(size: float) -> float:
+        if size >= 1.0 - 1e-12:
+            return math.inf
+        return 8.0 * n if size < 1e-3 else _ENOUGH / -math.log(size) + 4.0 * n
+
+    first = values[order[0]]
+    whole = samples(float(abs(first)))
+    rest = samples(float(abs(values[order[1]]))) if n > 1 else 4.0
+    if not closed or math.isinf(whole) or first.imag != 0.0 or first.real < 0.9:
+        return replace(nothing, samples=whole, whole=whole)
+    if rest > 0.6 * whole:
+        return replace(nothing, samples=whole, whole=whole)
+    rate, right = float(first.real), np.real(vectors[:, order[0]])
+    others, rows = np.linalg.eig(even.T)
+    left = np.real(rows[:, int(np.argmin(np.abs(others - first)))])
+    share = float(left @ right)
+    if abs(share) < 1e-9:
+        return replace(nothing, samples=whole, whole=whole)
+    return _Pace(
+        samples=rest, whole=whole, rate=rate, right=right * scale, left=left / share / scale
+    )
 
 
 def _even_scale(a: Real) -> Real:
@@ -181,11 +217,6 @@ def _even_scale(a: Real) -> Real:
     return scale
 
 
-def _evened(a: Real) -> Real:
-    scale = _even_scale(a)
-    return a * (scale / scale[:, np.newaxis])
-
-
 def _too_slow(what: str) -> OutOfRangeError:
     return OutOfRangeError(
         what,
@@ -196,7 +227,7 @@ def _too_slow(what: str) -> OutOfRangeError:
     )
 
 
-def _peaks(system: _System, samples: float) -> Peaks:
+def _peaks(system: _System, pace: _Pace) -> Peaks:
     """Sum the absolute impulse responses of a system, with everything that was left out.
 
     With A the true matrix, X[k] the computed states of a start x and a defect what a doubling or
@@ -209,6 +240,10 @@ def _peaks(system: _System, samples: float) -> Peaks:
 
         sum |c A^r b| <= sum |c X| + (|c| W) (|X[K]| + 2 sum (error of a^(2^j)) |X|) + roundings.
 
+    Where one real pole is much slower than the rest, X[K] = v u + remainder with v close to its
+    direction, and what v leaves is summed as it is: sum |c A^r v| = |c v|/(1 - rate) but for
+    (|c| W) |A v - rate v|/(1 - rate).
+
     Own derivation; no eigenvectors, so that defective matrices need no case of their own.
     Underflow is left out: it is below 1e-300.
     """
@@ -219,6 +254,7 @@ def _peaks(system: _System, samples: float) -> Peaks:
     d, d_radius = system.d
     p, m = d.shape
     extra = 0 if system.start is None else 1
+    samples = pace.samples
     if samples > _LONGEST:
         raise _too_slow("loop")
     columns = [np.eye(n), b]
@@ -277,7 +313,31 @@ def _peaks(system: _System, samples: float) -> Peaks:
                 left_low = np.minimum(left_low, missing.min(axis=1))
                 left_high = np.maximum(left_high, missing.max(axis=1))
             gone = way[:, -1]
-    end = np.abs(leap @ states[:, 0])
+    final = leap @ states[:, 0]
+
+    # what a slow pole leaves, per unit of its direction
+    far = 1.0 / (1.0 - pace.rate)
+    slow = pace.left @ final
+    end = np.abs(final - np.outer(pace.right, slow))
+    end += 4.0 * UNIT * (np.abs(final) + np.abs(np.outer(pace.right, slow)))
+    step, step_error = system.powers[0]
+    off = np.abs(step @ pace.right - pace.rate * pace.right) + (
+        step_error @ np.abs(pace.right) + 4.0 * UNIT * np.abs(pace.right)
+    )
+    end += np.outer(off, np.abs(slow) * far)
+    shown = np.outer(c @ pace.right, slow[n:])  # the next samples of the slow part
+    drawn = shown[:, :m] * far
+    sizes += np.outer(np.abs(pace.right), np.abs(slow) * far)
+    most = most + np.abs(drawn)
+    total += drawn
+    way_out = climbed + drawn[:, 0]
+    rise[:, 0] = np.minimum(rise[:, 0], way_out)
+    rise[:, 1] = np.maximum(rise[:, 1], way_out)
+    if system.start_input >= 0:
+        way_out = gone + drawn[:, system.start_input]
+        swing = np.abs(shown[:, m]) if extra else np.zeros(p)
+        left_low = np.minimum(left_low, np.minimum(gone, way_out) - swing)
+        left_high = np.maximum(left_high, np.maximum(gone, way_out) + swing)
 
     # sums of nonnegative numbers from here on: their roundings are covered by `out`
     left = (end + 2.0 * wrong) * out
@@ -306,7 +366,9 @@ def _peaks(system: _System, samples: float) -> Peaks:
     rise[:, 0] -= slack[:, 0]
     rise[:, 1] += slack[:, 0]
     if np.any(carried):
-        part = np.abs(last) + 2.0 * error[:, carried]
+        tail = shown[:, :m][:, carried]
+        steps = steps + np.abs(tail - last) + np.abs(tail)
+        part = 2.0 * error[:, carried]
         upper[:, carried] = (steps + part) * out
         lower[:, carried] = np.maximum(steps / out - part, 0.0)
         total[:, carried] = 0.0
@@ -536,6 +598,8 @@ class LoopPeaks:
         Sensor scale without polarity. [count/m or count/rad]
     rounded_output : str or None
         Signal whose rounding makes whole codes; None for real coefficients.
+    decay_samples : int
+        Samples after which the slowest pole has decayed to rounding; an estimate.
 
     Notes
     -----
@@ -549,6 +613,7 @@ class LoopPeaks:
     main: Motion
     count_per_position: float
     rounded_output: str | None
+    decay_samples: int
 
     def column(self, kind: str, name: str = "") -> int:
         """Index of a column.
@@ -588,7 +653,7 @@ class _Loop:
     d: tuple[Real, Real]
     start: Real
     carried: Flags
-    samples: float
+    pace: _Pace
     columns: tuple[Column, ...]
     list: _List
     position_rows: tuple[tuple[int, ...], ...]
@@ -772,7 +837,7 @@ def _assemble(
                 b_rows[i] = [*b_rows[i], values[i] if i < nx else arb(0)]
             d_rows = [[*row, arb(0)] for row in d_rows]
             kick = inner * kick
-    slowest = _samples_for(_doubles(a)[0])
+    pace = _pace(_doubles(a)[0], closed=not positions_only)
     start = np.zeros(size)
     start[:nx] = _hand_held(task)
     start[nx : nx + stored] = 1.0
@@ -783,7 +848,7 @@ def _assemble(
         d=_doubles(flint.arb_mat(d_rows)),
         start=start,
         carried=np.array(carried),
-        samples=slowest,
+        pace=pace,
         columns=tuple(columns),
         list=part,
         position_rows=position_rows,
@@ -950,7 +1015,7 @@ def loop_peaks(
     with flint.ctx.workprec(BITS):
         loop = _assemble(task, controller, phases=phases, force_instants=count)
         system = _System(
-            powers=_powers(loop.step, loop.samples),
+            powers=_powers(loop.step, loop.pace.samples),
             b=loop.b,
             c=loop.c,
             d=loop.d,
@@ -958,7 +1023,7 @@ def loop_peaks(
             start_input=[c.kind for c in loop.columns].index("output"),
             carried=loop.carried,
         )
-    peaks = _peaks(system, loop.samples)
+    peaks = _peaks(system, loop.pace)
     columns = loop.columns
     if force:
         columns, peaks = _with_force(task, loop, peaks, count)
@@ -976,6 +1041,7 @@ def loop_peaks(
         main=main,
         count_per_position=abs(task.count_per_position),
         rounded_output=_rounded_output(controller),
+        decay_samples=math.ceil(loop.pace.whole),
     )
 
 
@@ -1237,7 +1303,7 @@ def _open_system(
                 following.append(wide.get(name, laid_out({})))
         a_ball = flint.arb_mat([row[:size] for row in following])
         system = _System(
-            powers=_powers(a_ball, _samples_for(_doubles(a_ball)[0])),
+            powers=_powers(a_ball, _pace(_doubles(a_ball)[0]).samples),
             b=_doubles(flint.arb_mat([row[size:] for row in following])),
             c=_doubles(flint.arb_mat([row[:size] for row in rows])),
             d=_doubles(flint.arb_mat([row[size:] for row in rows])),
@@ -1308,7 +1374,7 @@ def _linear_ranges(
     if slow:
         return {}, {}, slow
     try:
-        peaks = _peaks(system, _samples_for(system.powers[0][0]))
+        peaks = _peaks(system, _pace(system.powers[0][0]))
     except OutOfRangeError:
         # nothing decays soon enough: without memory, every signal of the past is an input
         slow = {name for name, _ in part.states if name not in controller.inputs} - cut
@@ -1405,10 +1471,13 @@ def controller_bounds(controller: WordController) -> ControllerBounds:
             idle = set(limits) - cut
             break
         cut |= {acting[0]}
+    used = {name: narrow[name] for name in cut}
     take(found)
-    # once more with what is known now, and with every limit cut
-    for choice in (cut, frozenset({*cut, *limits})):
-        take(_linear_ranges(controller, choice, narrow)[0])
+    # once more where the cuts are narrower now, and with every limit cut
+    if any(narrow[name] != known for name, known in used.items()):
+        take(_linear_ranges(controller, cut, narrow)[0])
+    if idle:
+        take(_linear_ranges(controller, frozenset({*cut, *limits}), narrow)[0])
     for name, pair in remainders.items():
         rests[name] = rests[pair[0]]
 
@@ -2031,8 +2100,10 @@ def _coefficient_share(
         one, two = (
             _assemble(task, c, phases=4, positions_only=True) for c in (controller, designed)
         )
-        samples = max(one.samples, two.samples)
-        powers = zip(_powers(one.step, samples), _powers(two.step, samples), strict=True)
+        longer = max((one.pace, two.pace), key=lambda pace: pace.samples)
+        powers = zip(
+            _powers(one.step, longer.samples), _powers(two.step, longer.samples), strict=True
+        )
 
     def apart(a: Real, b: Real) -> Real:
         out = np.zeros((a.shape[0] + b.shape[0], a.shape[1] + b.shape[1]))
@@ -2054,7 +2125,9 @@ def _coefficient_share(
         ),
         d=(d, one.d[1][:, first] + two.d[1][:, first] + 2.0 * UNIT * np.abs(d)),
     )
-    peaks = _peaks(system, samples)
+    size = len(one.b[0]) + len(two.b[0])
+    pace = replace(longer, right=np.zeros(size), left=np.zeros(size))
+    peaks = _peaks(system, pace)
     loop = replace(one, columns=(Column(kind="reference"),))
     motion = _motion(task, loop, peaks, loop.position_rows, task.sampled.space.c_position)
     worst = max(

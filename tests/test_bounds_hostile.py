@@ -250,7 +250,7 @@ def test_largest_reference_stays_linear_and_little_more_does_not(name: str, bits
     assert found.largest_reference is not None
     scale = abs(task.count_per_position)
     reach = round(found.largest_reference * scale)
-    samples = gains.peaks.samples // 2
+    samples = gains.decay_samples // 2
     zero = task.loop.sensor.zero_count
     worst = worst_reference(task, controller, "unlimited_code", reach, samples)
     lanes = np.stack([worst, 2 * zero - worst], axis=1)
@@ -291,7 +291,7 @@ def test_every_signal_in_linear_operation(name: str) -> None:
     noise = 2.0
     found = ranges(task, controller, reference=reach / scale, noise=noise / scale, gains=gains)
     assert found.linear
-    samples = gains.peaks.samples // 2
+    samples = gains.decay_samples // 2
     _, names, responses = loop_responses(task, controller, samples)
     count = len(gains.signals)
     assert names[:count] == gains.signals
@@ -344,7 +344,7 @@ def test_largest_step_stays_linear_and_little_more_does_not(name: str) -> None:
     scale = abs(task.count_per_position)
     offsets = np.arange(16) / 16 - 0.5
     zero = task.loop.sensor.zero_count
-    samples = min(gains.peaks.samples // 4, 600)
+    samples = min(gains.decay_samples // 4, 600)
 
     def run(count: int) -> tuple[bool, bool]:
         saturated = touched = False
@@ -375,7 +375,7 @@ def test_any_force_stays_within(name: str) -> None:
     force = 0.3
     found = ranges(task, controller, reference=0.0, force=force, noise=0.0, gains=gains)
     assert found.linear
-    samples = gains.peaks.samples // 2
+    samples = gains.decay_samples // 2
     sampled = task.sampled
     n = len(sampled.space.a)
     # response to a force held over one sample, backwards
@@ -432,7 +432,7 @@ def test_deviation_is_nearly_reached_and_never_exceeded(name: str, bits: int, ra
         task,
         controller,
         reference=0.5 * (reference or 0.0),
-        samples=min(gains.peaks.samples * 2 // 3, 1200),
+        samples=min(gains.decay_samples * 2 // 3, 1200),
         lanes=24,
     )
     assert seen.limited_lanes == 0
@@ -525,7 +525,7 @@ def test_motion_at_rest_stays_within(name: str, bits: int) -> None:
         task,
         controller,
         reference=0.9 * bound.largest_reference,
-        settle=gains.peaks.samples // 2,
+        settle=gains.decay_samples // 2,
         samples=600,
     )
     assert seen.lanes == 256 and seen.limited_lanes == 0
@@ -548,7 +548,7 @@ def test_a_fine_output_hunts_less() -> None:
             task,
             controller,
             reference=1e-4,
-            settle=peaks.peaks.samples // 2,
+            settle=peaks.decay_samples // 2,
             samples=800,
             lanes=64,
         )
