@@ -29,6 +29,7 @@ from plant2.equations import (
     WordEquation,
     partial_sum_range,
     signal_range,
+    type_range,
     verify_ranges,
 )
 from plant2.errors import OutOfRangeError
@@ -150,50 +151,90 @@ def _powers(a: Any, slowest: float) -> tuple[tuple[Real, Real], ...]:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class _Pace:
-    """How long impulse responses are, and a slow real pole whose end is summed in closed form."""
+    """How long impulse responses are, and slow real poles whose end is summed in closed form."""
 
     samples: float  # of what is summed as it comes; infinite where something does not decay
     whole: float  # of everything
-    rate: float  # the slow pole, or 0
-    right: Real  # its direction, or 0
-    left: Real  # its share of a state, left . right = 1
+    rates: Real  # none, one or two slow poles
+    right: Real  # their directions, one a column
+    left: Real  # their shares of a state, one a row; left . right = 1
 
 
-def _pace(a: Real, *, closed: bool = True) -> _Pace:
+def _pace(a: Real) -> _Pace:
     """Samples in which all poles, or all but one slow real one, decay to nothing.
 
     Estimates only: what they are wrong by is bounded where they are used.
     """
     n = len(a)
-    nothing = _Pace(samples=1.0, whole=1.0, rate=0.0, right=np.zeros(n), left=np.zeros(n))
-    if not n:
-        return nothing
-    scale = _even_scale(a)
-    even = a * (scale / scale[:, np.newaxis])
-    values, vectors = np.linalg.eig(even)
-    order = np.argsort(-np.abs(values))
+
+    def plain(samples: float) -> _Pace:
+        return _Pace(
+            samples=samples,
+            whole=samples,
+            rates=np.zeros(0),
+            right=np.zeros((n, 0)),
+            left=np.zeros((0, n)),
+        )
 
     def samples(size: float) -> float:
         if size >= 1.0 - 1e-12:
             return math.inf
         return 8.0 * n if size < 1e-3 else _ENOUGH / -math.log(size) + 4.0 * n
 
+    if not n:
+        return plain(1.0)
+    scale = _even_scale(a)
+    even = a * (scale / scale[:, np.newaxis])
+    values, vectors = np.linalg.eig(even)
+    order = np.argsort(-np.abs(values))
     first = values[order[0]]
     whole = samples(float(abs(first)))
     rest = samples(float(abs(values[order[1]]))) if n > 1 else 4.0
-    if not closed or math.isinf(whole) or first.imag != 0.0 or first.real < 0.9:
-        return replace(nothing, samples=whole, whole=whole)
-    if rest > 0.6 * whole:
-        return replace(nothing, samples=whole, whole=whole)
-    rate, right = float(first.real), np.real(vectors[:, order[0]])
+    if math.isinf(whole) or first.imag != 0.0 or first.real < 0.9 or rest > 0.6 * whole:
+        return plain(whole)
+    right = np.real(vectors[:, order[0]])
     others, rows = np.linalg.eig(even.T)
     left = np.real(rows[:, int(np.argmin(np.abs(others - first)))])
     share = float(left @ right)
     if abs(share) < 1e-9:
-        return replace(nothing, samples=whole, whole=whole)
+        return plain(whole)
     return _Pace(
-        samples=rest, whole=whole, rate=rate, right=right * scale, left=left / share / scale
+        samples=rest,
+        whole=whole,
+        rates=np.array([float(first.real)]),
+        right=(right * scale)[:, np.newaxis],
+        left=(left / share / scale)[np.newaxis],
     )
+
+
+def _side_by_side(one: _Pace, two: _Pace) -> _Pace:
+    """Pace of two systems that do not touch each other."""
+    n, m = one.right.shape[0], two.right.shape[0]
+    both = len(one.rates) == len(two.rates) == 1
+    if not both:
+        longer = max(one.whole, two.whole)
+        return _Pace(
+            samples=longer,
+            whole=longer,
+            rates=np.zeros(0),
+            right=np.zeros((n + m, 0)),
+            left=np.zeros((0, n + m)),
+        )
+    return _Pace(
+        samples=max(one.samples, two.samples),
+        whole=max(one.whole, two.whole),
+        rates=np.concatenate([one.rates, two.rates]),
+        right=_apart(one.right, two.right),
+        left=_apart(one.left, two.left),
+    )
+
+
+def _apart(a: Real, b: Real) -> Real:
+    """Two matrices as blocks of one."""
+    out = np.zeros((a.shape[0] + b.shape[0], a.shape[1] + b.shape[1]))
+    out[: a.shape[0], : a.shape[1]] = a
+    out[a.shape[0] :, a.shape[1] :] = b
+    return out
 
 
 def _even_scale(a: Real) -> Real:
@@ -220,7 +261,7 @@ def _even_scale(a: Real) -> Real:
 def _too_slow(what: str) -> OutOfRangeError:
     return OutOfRangeError(
         what,
-        math.nan,
+        None,
         "",
         "is unstable, or too slow for its impulse response to be summed",
         "bound a stable loop whose slowest pole decays within some thousand samples",
@@ -242,7 +283,8 @@ def _peaks(system: _System, pace: _Pace) -> Peaks:
 
     Where one real pole is much slower than the rest, X[K] = v u + remainder with v close to its
     direction, and what v leaves is summed as it is: sum |c A^r v| = |c v|/(1 - rate) but for
-    (|c| W) |A v - rate v|/(1 - rate).
+    (|c| W) |A v - rate v|/(1 - rate). Of two such poles p and q that all but cancel,
+    sum |p rate^k + q other^k| <= |p + q|/(1 - rate) + |q| |1/(1 - rate) - 1/(1 - other)|.
 
     Own derivation; no eigenvectors, so that defective matrices need no case of their own.
     Underflow is left out: it is below 1e-300.
@@ -315,29 +357,35 @@ def _peaks(system: _System, pace: _Pace) -> Peaks:
             gone = way[:, -1]
     final = leap @ states[:, 0]
 
-    # what a slow pole leaves, per unit of its direction
-    far = 1.0 / (1.0 - pace.rate)
+    # what slow poles leave
+    far = 1.0 / (1.0 - pace.rates)
     slow = pace.left @ final
-    end = np.abs(final - np.outer(pace.right, slow))
-    end += 4.0 * UNIT * (np.abs(final) + np.abs(np.outer(pace.right, slow)))
+    end = np.abs(final - pace.right @ slow)
+    end += 8.0 * UNIT * (np.abs(final) + np.abs(pace.right) @ np.abs(slow))
     step, step_error = system.powers[0]
-    off = np.abs(step @ pace.right - pace.rate * pace.right) + (
-        step_error @ np.abs(pace.right) + 4.0 * UNIT * np.abs(pace.right)
-    )
-    end += np.outer(off, np.abs(slow) * far)
-    shown = np.outer(c @ pace.right, slow[n:])  # the next samples of the slow part
-    drawn = shown[:, :m] * far
-    sizes += np.outer(np.abs(pace.right), np.abs(slow) * far)
-    most = most + np.abs(drawn)
-    total += drawn
-    way_out = climbed + drawn[:, 0]
-    rise[:, 0] = np.minimum(rise[:, 0], way_out)
-    rise[:, 1] = np.maximum(rise[:, 1], way_out)
+    off = np.abs(step @ pace.right - pace.rates * pace.right)
+    off += step_error @ np.abs(pace.right) + 4.0 * UNIT * np.abs(pace.right)
+    end += off @ (np.abs(slow) * far[:, np.newaxis])
+    sizes += np.abs(pace.right) @ (np.abs(slow) * far[:, np.newaxis])
+    # by pole: value at the next sample, and all that is to come
+    shown = [np.outer(c @ pace.right[:, i], slow[i, n:]) for i in range(len(far))]
+    nothing = np.zeros((p, m + extra))
+    onward = sum((v * f for v, f in zip(shown, far, strict=True)), nothing)
+    afterwards = np.abs(onward)
+    if len(far) == 2:
+        afterwards = np.abs(shown[0] + shown[1]) * far[0] + np.abs(shown[1]) * abs(far[0] - far[1])
+    # a single pole goes one way
+    swing = afterwards if len(far) == 2 else nothing
+    tail = sum(shown, nothing)
+    most, surely = most + afterwards[:, :m], most + np.abs(onward[:, :m])
+    total += onward[:, :m]
+    rise[:, 0] = np.minimum(rise[:, 0], climbed + onward[:, 0] - swing[:, 0])
+    rise[:, 1] = np.maximum(rise[:, 1], climbed + onward[:, 0] + swing[:, 0])
     if system.start_input >= 0:
-        way_out = gone + drawn[:, system.start_input]
-        swing = np.abs(shown[:, m]) if extra else np.zeros(p)
-        left_low = np.minimum(left_low, np.minimum(gone, way_out) - swing)
-        left_high = np.maximum(left_high, np.maximum(gone, way_out) + swing)
+        way = gone + onward[:, system.start_input]
+        wide = swing[:, system.start_input] + (afterwards[:, m] if extra else 0.0)
+        left_low = np.minimum(left_low, np.minimum(gone, way) - wide)
+        left_high = np.maximum(left_high, np.maximum(gone, way) + wide)
 
     # sums of nonnegative numbers from here on: their roundings are covered by `out`
     left = (end + 2.0 * wrong) * out
@@ -355,7 +403,7 @@ def _peaks(system: _System, pace: _Pace) -> Peaks:
     error = (own @ sizes[:, inputs] + weight @ (left[:, inputs] + b_radius) + d_radius) * out
     slack = error + most * (out - 1.0)
     upper = (most + error) * out
-    lower = np.maximum(most / out - error, 0.0)
+    lower = np.maximum(surely / out - error, 0.0)
     start = np.zeros(p)
     if system.start_input >= 0:
         at = system.start_input
@@ -366,9 +414,9 @@ def _peaks(system: _System, pace: _Pace) -> Peaks:
     rise[:, 0] -= slack[:, 0]
     rise[:, 1] += slack[:, 0]
     if np.any(carried):
-        tail = shown[:, :m][:, carried]
-        steps = steps + np.abs(tail - last) + np.abs(tail)
-        part = 2.0 * error[:, carried]
+        after = tail[:, :m][:, carried]
+        steps = steps + np.abs(after - last) + np.abs(after)
+        part = 2.0 * error[:, carried] + 2.0 * swing[:, :m][:, carried]
         upper[:, carried] = (steps + part) * out
         lower[:, carried] = np.maximum(steps / out - part, 0.0)
         total[:, carried] = 0.0
@@ -837,7 +885,7 @@ def _assemble(
                 b_rows[i] = [*b_rows[i], values[i] if i < nx else arb(0)]
             d_rows = [[*row, arb(0)] for row in d_rows]
             kick = inner * kick
-    pace = _pace(_doubles(a)[0], closed=not positions_only)
+    pace = _pace(_doubles(a)[0])
     start = np.zeros(size)
     start[:nx] = _hand_held(task)
     start[nx : nx + stored] = 1.0
@@ -1177,10 +1225,6 @@ class _OpenColumn:
     constant: bool
 
 
-def _type_range(bits: int) -> Range:
-    return -(1 << (bits - 1)), (1 << (bits - 1)) - 1
-
-
 def _limited_copies(controller: WordController) -> dict[str, tuple[str, int, int]]:
     """Signals that are nothing but another one of the same sample, limited: sign and constant."""
     found = {}
@@ -1235,7 +1279,7 @@ def _open_system(
     import flint
 
     part = _list_of(controller, cut)
-    low, high = _type_range(controller.word_bits)
+    low, high = type_range(controller.word_bits)
     columns = [
         _OpenColumn(kind="input", name=name, low=float(low), high=float(high), constant=False)
         for name in controller.inputs
@@ -1482,8 +1526,8 @@ def controller_bounds(controller: WordController) -> ControllerBounds:
         rests[name] = rests[pair[0]]
 
     out = []
-    top = {False: _type_range(controller.word_bits)[1], True: _type_range(controller.sum_bits)[1]}
-    known = dict.fromkeys(controller.inputs, _type_range(controller.word_bits)) | narrow
+    top = {False: type_range(controller.word_bits)[1], True: type_range(controller.sum_bits)[1]}
+    known = dict.fromkeys(controller.inputs, type_range(controller.word_bits)) | narrow
     for e in controller.update:
         whole, _ = partial_sum_range(e, known)
         after = signal_range(e, whole)
@@ -2100,21 +2144,12 @@ def _coefficient_share(
         one, two = (
             _assemble(task, c, phases=4, positions_only=True) for c in (controller, designed)
         )
-        longer = max((one.pace, two.pace), key=lambda pace: pace.samples)
-        powers = zip(
-            _powers(one.step, longer.samples), _powers(two.step, longer.samples), strict=True
-        )
-
-    def apart(a: Real, b: Real) -> Real:
-        out = np.zeros((a.shape[0] + b.shape[0], a.shape[1] + b.shape[1]))
-        out[: a.shape[0], : a.shape[1]] = a
-        out[a.shape[0] :, a.shape[1] :] = b
-        return out
-
+        pace = _side_by_side(one.pace, two.pace)
+        powers = zip(_powers(one.step, pace.samples), _powers(two.step, pace.samples), strict=True)
     first = slice(0, 1)  # the reference
     d = one.d[0][:, first] - two.d[0][:, first]
     system = _System(
-        powers=tuple((apart(p[0], q[0]), apart(p[1], q[1])) for p, q in powers),
+        powers=tuple((_apart(p[0], q[0]), _apart(p[1], q[1])) for p, q in powers),
         b=(
             np.concatenate([one.b[0][:, first], two.b[0][:, first]]),
             np.concatenate([one.b[1][:, first], two.b[1][:, first]]),
@@ -2125,8 +2160,6 @@ def _coefficient_share(
         ),
         d=(d, one.d[1][:, first] + two.d[1][:, first] + 2.0 * UNIT * np.abs(d)),
     )
-    size = len(one.b[0]) + len(two.b[0])
-    pace = replace(longer, right=np.zeros(size), left=np.zeros(size))
     peaks = _peaks(system, pace)
     loop = replace(one, columns=(Column(kind="reference"),))
     motion = _motion(task, loop, peaks, loop.position_rows, task.sampled.space.c_position)

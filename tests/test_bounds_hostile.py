@@ -316,11 +316,16 @@ def test_every_signal_in_linear_operation(name: str) -> None:
 
 
 def run_words(
-    task: Task, controller: WordController, references: np.ndarray, noise: np.ndarray
+    task: Task,
+    controller: WordController,
+    references: np.ndarray,
+    noise: np.ndarray,
+    *,
+    offset: float = 0.0,
 ) -> tuple[dict[str, np.ndarray], dict[str, np.ndarray]]:
     """Least and largest word of every signal in every lane, from rest at the first reference."""
     lanes = references.shape[1]
-    pair = _Pair(task, controller, references[0].copy(), np.zeros(lanes), 2)
+    pair = _Pair(task, controller, references[0].copy(), np.full(lanes, offset), 2)
     low = {e.name: np.full(lanes, 1 << 62) for e in controller.update}
     high = {e.name: np.full(lanes, -(1 << 62)) for e in controller.update}
     for reference, shift in zip(references, noise, strict=True):
@@ -365,6 +370,35 @@ def test_largest_step_stays_linear_and_little_more_does_not(name: str) -> None:
     assert run(step) == (False, False)
     if found.largest_step < 0.9 * task.plant.travel:
         assert any(run(math.ceil(1.06 * step) + 8))
+
+
+@pytest.mark.parametrize(
+    "name",
+    ["pd", "pid", "free_mass", "offset", "rest_and_bias", "filtered", "valve_spool", "scan_mirror"],
+)
+def test_every_start_at_rest_is_inside(name: str) -> None:
+    """Any place within the references and within its count, code as it rests there: held where it
+    stands until the first update, then kept or led away by jumps."""
+    task, controller, _ = built(name)
+    reach = 60
+    scale = abs(task.count_per_position)
+    found = ranges(task, controller, reference=reach / scale, noise=0.0, gains=gains_of(name))
+    rng = np.random.default_rng(9)
+    lanes, samples = 120, 160
+    zero = task.loop.sensor.zero_count
+    start = zero + rng.integers(-reach, reach + 1, lanes)
+    jumps = zero + rng.integers(-reach, reach + 1, (samples // 20, lanes))
+    references = np.repeat(jumps, 20, axis=0)
+    references[:, : lanes // 2] = start[: lanes // 2]
+    references[0] = start
+    for offset in (-0.5, -0.2, 0.0, 0.3, 0.4999):
+        low, high = run_words(
+            task, controller, references, np.zeros((samples, lanes)), offset=offset
+        )
+        for signal in low:
+            s, unit = found.signal(signal), 2.0 ** -controller.equation(signal).frac_bits
+            assert s.low <= low[signal].min() * unit, signal
+            assert high[signal].max() * unit <= s.high, signal
 
 
 @pytest.mark.parametrize("name", ["pd", "pid", "filtered"])
