@@ -15,6 +15,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from plant2.bounds import Deviation, LimitCycles, deviation, limit_cycles, loop_peaks
 from plant2.closedloop import (
     ClosedLoop,
     LoopFigures,
@@ -113,6 +114,12 @@ class Evidence:
         Lines worth printing.
     word_faults : tuple of str
         Why there are no words, if there are none.
+    deviation : Deviation or None
+        Proven distance from the ideal loop; None where it was not asked for or has no proof.
+    limit_cycles : LimitCycles or None
+        Proven unrest at rest; None likewise.
+    bound_fault : str
+        Why there is no bound although it was asked for.
 
     Notes
     -----
@@ -131,6 +138,9 @@ class Evidence:
     step: CheckedStep | None
     notes: tuple[str, ...]
     word_faults: tuple[str, ...]
+    deviation: Deviation | None = None
+    limit_cycles: LimitCycles | None = None
+    bound_fault: str = "it was not asked for"
 
 
 def built_closed_loop(task: Task, controller: WordController) -> ClosedLoop:
@@ -211,7 +221,7 @@ def horizon_samples(loop: Loop, closed: ClosedLoop, poles: Complex) -> int:
             f"must be at most {LONGEST_STEP}: {slow} asks for more",
             "shorten the limit, speed up the integral, or lower the sample rate",
         )
-    return max(50 + 2 * closed.sampled.whole_delay, math.ceil(samples))
+    return max(50 + 2 * closed.sampled.whole_delay, math.ceil(samples * (1.0 - 1e-12)))
 
 
 def linear_response(task: Task, closed: ClosedLoop, samples: int) -> tuple[Trajectory, Real]:
@@ -474,6 +484,7 @@ def run_chain(
     *,
     words_from: WordController | None = None,
     step: bool = True,
+    bounds: bool = False,
     progress: Progress | None = None,
 ) -> Evidence:
     """Run the whole chain for the nominal unit.
@@ -486,6 +497,8 @@ def run_chain(
         Check these words instead of newly chosen ones.
     step : bool
         Whether to run the checked step.
+    bounds : bool
+        Whether to prove deviation and unrest at rest; done anyway where the loop file limits them.
     progress : callable or None
         Told the finished fraction of a long simulation.
 
@@ -541,6 +554,20 @@ def run_chain(
     built = loop_figures(closed, pair, poles)
     linear = None
     checked = None
+    away: Deviation | None = None
+    unrest: LimitCycles | None = None
+    bound_fault = "it was not asked for" if stable else "the loop is unstable"
+    limits = resolved.limits
+    asked = limits.deviation_count is not None or limits.limit_cycle_count is not None
+    if stable and step and (bounds or asked):
+        try:
+            peaks = loop_peaks(task, controller)
+            listed = None if words is None else words.equations
+            away = deviation(task, controller, designed=listed, gains=peaks)
+            unrest = limit_cycles(task, controller, gains=peaks)
+            bound_fault = ""
+        except OutOfRangeError as fault:
+            bound_fault = str(fault)
     if stable:
         linear = _linear(task, closed, poles)
         if step:
@@ -564,6 +591,9 @@ def run_chain(
         step=checked,
         notes=notes,
         word_faults=(),
+        deviation=away,
+        limit_cycles=unrest,
+        bound_fault=bound_fault,
     )
 
 

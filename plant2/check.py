@@ -32,6 +32,8 @@ from plant2.errors import Plant2Error
 from plant2.loopfile import Loop
 from plant2.plant import damping_ratio, natural_frequency_rad_per_s, static_gain
 
+_Outcome = tuple[float | None, bool | None, str]
+
 FORMAT = 1
 """Version of the JSON layout."""
 
@@ -152,7 +154,7 @@ def judge(evidence: Evidence) -> Report:
         name: str,
         limit: float | None,
         unit: str,
-        value: Callable[[], tuple[float | None, bool | None, str]],
+        value: Callable[[], _Outcome],
         *,
         at_most: bool = True,
     ) -> None:
@@ -186,10 +188,10 @@ def judge(evidence: Evidence) -> Report:
             )
         )
 
-    def plain(number: float) -> tuple[float | None, bool | None, str]:
+    def plain(number: float) -> _Outcome:
         return number, None, ""
 
-    def settled() -> tuple[float | None, bool | None, str]:
+    def settled() -> _Outcome:
         assert step is not None
         if math.isnan(step.settling_time_s):
             return (
@@ -199,7 +201,7 @@ def judge(evidence: Evidence) -> Report:
             )
         return plain(step.settling_time_s)
 
-    def margin(number: float | None, nothing: str) -> tuple[float | None, bool | None, str]:
+    def margin(number: float | None, nothing: str) -> _Outcome:
         return (None, True, nothing) if number is None else plain(number)
 
     if limits.overshoot is not None:
@@ -261,7 +263,7 @@ def judge(evidence: Evidence) -> Report:
         ),
     )
 
-    def stiff() -> tuple[float | None, bool | None, str]:
+    def stiff() -> _Outcome:
         assert linear is not None
         if math.isinf(linear.stiffness_at_dc):
             return None, True, "integral action: no deflection at rest"
@@ -275,21 +277,38 @@ def judge(evidence: Evidence) -> Report:
         at_most=False,
     )
 
-    def later(what: str) -> Callable[[], tuple[float | None, bool | None, str]]:
+    def later(what: str) -> Callable[[], _Outcome]:
         return lambda: (None, None, what)
 
+    def bounded(value: float | None, voids: tuple[str, ...]) -> _Outcome:
+        if value is None:
+            return None, None, f"no bound: {evidence.bound_fault}"
+        if voids:
+            return None, None, f"no bound holds with {', '.join(voids)}"
+        return plain(value)
+
+    away, unrest = evidence.deviation, evidence.limit_cycles
     add(
         "deviation",
         limits.deviation_count,
         "count",
-        later("this version has no proven bound for it"),
+        lambda: bounded(away.count if away else None, away.voids if away else ()),
     )
-    add(
-        "limit_cycle",
-        limits.limit_cycle_count,
-        "count",
-        later("this version has no proven bound for it"),
-    )
+
+    def cycling() -> _Outcome:
+        number, verdict, reason = bounded(
+            unrest.count if unrest else None, unrest.voids if unrest else ()
+        )
+        reach = unrest.largest_reference if unrest else None
+        if not reason and (reach is None or reach < loop.step):
+            reason = "the loop is not proven to stay off its limits at rest at the target"
+        if not reason or step is None or limits.limit_cycle_count is None:
+            return number, verdict, reason
+        seen = 0.5 * step.rest_peak_to_peak_count
+        judged = seen <= limits.limit_cycle_count
+        return seen, judged, f"the largest seen at the end of the checked step; {reason}"
+
+    add("limit_cycle", limits.limit_cycle_count, "count", cycling)
     add(
         "rms_current",
         limits.rms_current_a,
@@ -599,10 +618,21 @@ def as_json(report: Report, *, command: str = "check", with_words: bool = False)
             }
             for w in e.words.errors
         ],
-        "deviation_bound_count": None,
+        "deviation_bound_count": number(None if e.deviation is None else e.deviation.count),
         "deviation_seen_count": None,
-        "limit_cycle_bound_count": None,
-        "limit_cycle_seen_count": None,
+        "deviation_shares_count": None
+        if e.deviation is None
+        else {
+            "sensor": number(e.deviation.sensor),
+            "output": number(e.deviation.output),
+            "inner": number(e.deviation.inner),
+            "coefficients": number(e.deviation.coefficients),
+        },
+        "limit_cycle_bound_count": number(None if e.limit_cycles is None else e.limit_cycles.count),
+        "limit_cycle_seen_count": None
+        if step is None
+        else number(0.5 * step.rest_peak_to_peak_count),
+        "bounds_void_with": [] if e.deviation is None else list(e.deviation.voids),
         "rest_peak_to_peak_count": None if step is None else number(step.rest_peak_to_peak_count),
     }
     out["cost"] = [

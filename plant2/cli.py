@@ -104,8 +104,10 @@ def _console(to_json: str | None) -> Console:
     from rich.console import Console
 
     stream = sys.stderr if to_json == "-" else sys.stdout
-    console = Console(file=stream, highlight=False, soft_wrap=not stream.isatty())
-    return console
+    if stream.isatty():
+        return Console(file=stream, highlight=False)
+    # a pipe has no width: one line stays one line
+    return Console(file=stream, highlight=False, soft_wrap=True, width=200)
 
 
 def _load(path: Path, sets: Sequence[str] | None) -> Loop:
@@ -183,7 +185,7 @@ def design_command(loop: LoopArgument, sets: SetOption = None, to_json: JsonOpti
 
 
 def _checked(
-    loop: Path, sets: Sequence[str] | None, words: Path | None = None
+    loop: Path, sets: Sequence[str] | None, *, bounds: bool, words: Path | None = None
 ) -> tuple[Evidence, Report]:
     from plant2.chain import run_chain
     from plant2.check import judge, words_from_file
@@ -191,7 +193,7 @@ def _checked(
     described = _load(loop, sets)
     flashed = None if words is None else words_from_file(words, described)
     with _progress() as progress:
-        evidence = run_chain(described, words_from=flashed, progress=progress)
+        evidence = run_chain(described, words_from=flashed, bounds=bounds, progress=progress)
     return evidence, judge(evidence)
 
 
@@ -214,7 +216,7 @@ def check(
         from plant2 import present
         from plant2.check import as_json
 
-        evidence, report = _checked(loop, sets, words)
+        evidence, report = _checked(loop, sets, bounds=to_json is not None, words=words)
         console = _console(to_json)
         present.report(console, report)
         _write_json(as_json(report), to_json)
@@ -241,7 +243,7 @@ def emit(
         from plant2.firmware import firmware_files
         from plant2.proof import ProofError
 
-        evidence, report = _checked(loop, sets)
+        evidence, report = _checked(loop, sets, bounds=True)
         console = _console(None)
         present.report(console, report)
         if not report.met and not (despite_misses and report.emittable_despite_misses):

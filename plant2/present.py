@@ -447,6 +447,17 @@ def fixed_point(console: Console, evidence: Evidence) -> None:
                 f"{worst.word}, {100.0 * abs(worst.stored / worst.wanted - 1.0):.2g} % off",
             )
         )
+    away, unrest = evidence.deviation, evidence.limit_cycles
+    if away is not None and unrest is not None:
+        voids = f"; void with {', '.join(away.voids)}" if away.voids else ""
+        rows += [
+            (
+                "deviation, bound",
+                f"{away.count:.3g} counts: sensor steps {away.sensor:.3g}, output rounding "
+                f"{away.output:.3g}, inner roundings {away.inner:.2g}{voids}",
+            ),
+            ("limit cycle, bound", f"{unrest.count:.3g} counts, half of peak to peak, at rest"),
+        ]
     _block(console, f"integers, {controller.word_bits}-bit words", rows)
 
 

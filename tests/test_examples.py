@@ -33,7 +33,7 @@ KEPT = (
 
 
 def figures(folder: Path) -> dict[str, Any]:
-    report = judge(run_chain(load_loop(folder / "loop.toml")))
+    report = judge(run_chain(load_loop(folder / "loop.toml"), bounds=True))
     data = as_json(report)
     return {key: data[key] for key in KEPT}
 
