@@ -28,8 +28,11 @@ clean:
 	find plant2 tests examples .ci -name __pycache__ -prune -exec rm -rf {} +
 
 # Both return at once when nothing is to do.
+# Compiled here, so that a start is quick even where Python is told to write no bytecode.
 venv:
 	@$(PYTHON) .ci/prepare.py
+	@$(RUN) -m compileall -q plant2
 
 venv-test:
 	@$(PYTHON) .ci/prepare.py test
+	@$(RUN) -m compileall -q plant2
