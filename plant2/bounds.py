@@ -77,7 +77,8 @@ class Peaks:
         Proven bounds of the response to a unit step of the first input, at any time, 0 before it
         included: lowest, highest. [output per input]
     start : array of float, shape (p,)
-        Proven bound of what a unit of the start error leaves, at any time. [output per input]
+        Proven bound of what a unit of the start error leaves, from the first sample on.
+        [output per input]
     weight : array of float, shape (p, n)
         Proven upper bound of the sum of absolute responses to a start in each state.
         [output per state]
@@ -330,7 +331,7 @@ def _peaks(system: _System, pace: _Pace) -> Peaks:
     climbed = d[:, 0].copy()
     rise = np.stack([np.minimum(0.0, climbed), np.maximum(0.0, climbed)], axis=1)
     gone = np.zeros(p) if system.start_input < 0 else d[:, system.start_input].copy()
-    left_low, left_high = np.zeros(p), np.zeros(p)
+    left_low, left_high = gone.copy(), gone.copy()
     for number in range(blocks):
         if number:
             states = (leap @ states.reshape(n, -1)).reshape(n, block, width)
@@ -1287,6 +1288,11 @@ def _open_system(
     for name in sorted(set(cut)):
         unit = 2.0 ** -controller.equation(name).frac_bits
         a, b = ranges.get(name, (0, 0))
+        started = [w.after_reset for w in controller.state if w.signal == name]
+        for e in controller.reset:
+            if e.name in started:
+                a, b = min(a, e.low), max(b, e.high)
+        a, b = (min(a, 0), max(b, 0)) if None in started else (a, b)
         columns.append(
             _OpenColumn(
                 kind="cut",
@@ -1351,9 +1357,85 @@ def _open_system(
             b=_doubles(flint.arb_mat([row[size:] for row in following])),
             c=_doubles(flint.arb_mat([row[:size] for row in rows])),
             d=_doubles(flint.arb_mat([row[size:] for row in rows])),
+            start_input=_reference_column(controller, columns),
             carried=np.array(carried),
         )
     return system, tuple(columns), part
+
+
+def _sole_reader(controller: WordController, source: str) -> WordEquation | None:
+    """The first equation that reads one raw input and nothing else, as it comes."""
+    for e in controller.update:
+        if len(e.terms) == 1 and e.terms[0].signal == source and abs(e.terms[0].factor) == 1:
+            return e if not (e.shift or e.held or e.rest) else None
+    return None
+
+
+def _reference_column(controller: WordController, columns: Sequence[_OpenColumn]) -> int:
+    reader = _sole_reader(controller, "reference")
+    names = ("reference",) if reader is None else (reader.name, "reference")
+    return next(i for i, c in enumerate(columns) if c.kind in ("cut", "input") and c.name in names)
+
+
+def _beyond_reference(controller: WordController, ranges: Mapping[str, Range]) -> int | None:
+    """How far beyond every reference a reset can put the position; None where nothing tells."""
+    ends = [_sole_reader(controller, source) for source in ("reference", "position")]
+    if ends[0] is None or ends[1] is None:
+        return None
+    (low, high), (least, most) = (ranges[e.name] for e in ends if e is not None)
+    return max(0, most - high, low - least)
+
+
+def _stays_at_rest(controller: WordController, cut: frozenset[str]) -> bool:
+    """Whether a reset leaves what endless constant inputs would: no state word moves after it.
+
+    Tried with positions and outputs over their whole ranges, with the reference not limited;
+    signals that are taken as inputs may move.
+    """
+    place = {(w.signal, max(w.lag, 1)): w.name for w in controller.state if w.signal is not None}
+    reader = _sole_reader(controller, "position")
+    reference = _sole_reader(controller, "reference")
+    if reader is None or reference is None:
+        return False
+    sign, low, high = reader.terms[0].factor, reader.low, reader.high
+    top = type_range(controller.word_bits)[1]
+
+    def run(
+        equations: Sequence[WordEquation], known: dict[str, int], state: Mapping[str, int]
+    ) -> dict[str, int]:
+        for e in equations:
+            total = e.constant + sum(state[n] for n in (e.held, e.rest) if n is not None)
+            for t in e.terms:
+                value = state[place[t.signal, t.lag]] if t.lag else known[t.signal]
+                total += t.factor * value
+            value = (total + e.rounding) >> e.shift
+            if e.rest is not None:
+                known[f"rest {e.rest}"] = total - (value << e.shift)
+            if e.limit is not None and e is not reference:
+                value = min(max(value, e.limit[0]), e.limit[1])
+            known[e.name] = value
+        return known
+
+    for count in (low, high, 0, low // 3, high // 7):
+        position = sign * (min(max(count, low), high) - reader.constant)
+        for output in (-top, -7, 0, 12, top):
+            begun = run(controller.reset, {"position": position, "output": output}, {})
+            state = {
+                w.name: 0 if w.after_reset is None else begun[w.after_reset]
+                for w in controller.state
+            }
+            inputs = {"reference": position, "position": position, "added": 0}
+            now = run(controller.update, inputs, state)
+            for w in controller.state:
+                if w.signal in cut:
+                    continue
+                if w.signal is None:
+                    new = now.get(f"rest {w.name}", state[w.name])
+                else:
+                    new = now[w.signal] if w.lag <= 1 else state[place[w.signal, w.lag - 1]]
+                if new != state[w.name]:
+                    return False
+    return True
 
 
 def _down(value: Fraction) -> float:
@@ -1429,6 +1511,8 @@ def _linear_ranges(
     high = np.array([c.high for c in columns])
     constant = np.array([c.constant for c in columns])
     lower, upper = _extent(peaks, low, high, constant)
+    beyond = _beyond_reference(controller, ranges) or 0
+    lower, upper = lower - beyond * peaks.start, upper + beyond * peaks.start
     found, rests = {}, {}
     for i, (e, a, b) in enumerate(zip(controller.update, lower, upper, strict=True)):
         scale = 1 << e.frac_bits
@@ -1463,7 +1547,8 @@ def controller_bounds(controller: WordController) -> ControllerBounds:
     is cut: its signal becomes an input of its own within the limit, since a limited signal that
     feeds back need not stay within the linear bound. Signals that feed themselves without decaying
     are cut always. Any choice of cuts proves; the narrowest range of two choices counts. A reset
-    leaves what constant inputs would have led to, so that it adds nothing. Own derivation.
+    leaves what endless constant inputs would have led to, which is tried; a position beyond the
+    range of the references adds what such a reference would have left. Own derivation.
     """
     verify_ranges(controller)
     limits = {e.name: e.limit for e in controller.update if e.limit is not None}
@@ -1515,10 +1600,13 @@ def controller_bounds(controller: WordController) -> ControllerBounds:
             idle = set(limits) - cut
             break
         cut |= {acting[0]}
+    if not _stays_at_rest(controller, cut) or _beyond_reference(controller, narrow) is None:
+        # the linear part says nothing about such starts: intervals hold for every state
+        found, idle = {}, set()
     used = {name: narrow[name] for name in cut}
     take(found)
     # once more where the cuts are narrower now, and with every limit cut
-    if any(narrow[name] != known for name, known in used.items()):
+    if found and any(narrow[name] != known for name, known in used.items()):
         take(_linear_ranges(controller, cut, narrow)[0])
     if idle:
         take(_linear_ranges(controller, frozenset({*cut, *limits}), narrow)[0])

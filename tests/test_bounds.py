@@ -1112,6 +1112,24 @@ def test_derivative_is_bounded_by_twice_its_gain() -> None:
     assert total == pytest.approx(2.0 * kd.factor / 2**e.sum_frac_bits, rel=1e-12)
 
 
+def test_starts_that_are_no_rest_leave_the_intervals() -> None:
+    """A reset that forgets the last position kicks the derivative: intervals must do."""
+    _, controller, _ = built("pd")
+    usual = controller_bounds(controller)
+    assert usual.signal("unlimited_code").linear
+    forgetful = replace(
+        controller,
+        state=tuple(
+            replace(w, after_reset=None) if w.name == "position_count_before" else w
+            for w in controller.state
+        ),
+    )
+    found = controller_bounds(forgetful)
+    assert found.idle_limits == () and not any(s.linear for s in found.signals)
+    for s, e in zip(found.signals, controller.update, strict=True):
+        assert (s.low, s.high) == (e.low, e.high) or s.name == "excess"
+
+
 def test_a_limit_that_may_act_is_not_followed() -> None:
     """Lowered below what the inputs can make, the limit itself becomes the bound."""
     _, controller, _ = built("pd")
