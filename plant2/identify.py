@@ -26,7 +26,9 @@ from numpy.typing import NDArray
 from plant2.errors import Plant2Error
 from plant2.logs import Log, in_units_of
 from plant2.loopfile import Loop
+from plant2.plant import Plant, StateSpace, state_space
 from plant2.quantity import format_si
+from plant2.sampled import SampledPlant, sample
 from plant2.solve import Fit, least_squares
 
 Real = NDArray[np.float64]
@@ -45,12 +47,16 @@ DOUBTFUL = 2.0
 AVERAGED_FROM_CYCLES = 150.0
 """From this many cycles on, amplitudes of blocks are fitted, before single samples."""
 
+MOST_DELAY = 40
+"""Delays up to this many samples are looked for."""
+
 _Z95 = 1.959963984540054
 _POINTS_PER_CYCLE = 12.0
 _TIME_NODES = 20
 _SIZE_NODES = 16
 _STRETCH = 1.15
 _LOOKED_AT = 65_536
+_SEARCHED = 20_000
 
 
 class IdentificationError(Plant2Error):
@@ -109,7 +115,7 @@ class Identification:
     Parameters
     ----------
     kind : str
-        "ring_down" for a free decay.
+        "ring_down" for a free decay, "response" for a motion under a measured input.
     position_unit : str
         "m", "rad" or "count", as the log has it.
     natural_frequency_hz : Estimate or None
@@ -144,6 +150,12 @@ class Identification:
         Position of rest. [position]
     release_s : Estimate or None
         When a held mass was let go, from the first sample. [s]
+    gain : Estimate or None
+        Acceleration per unit of the input. [position/s^2 per `input_unit`]
+    input_name : str
+        Column that drives: "force", "current" or "output"; empty for a free decay.
+    input_unit : str
+        Its unit.
     first_s, last_s : float
         The part of the log that was fitted, from its first sample. [s]
     cycles : float
@@ -178,6 +190,9 @@ class Identification:
     drag_per_position: Estimate | None = None
     offset: Estimate | None = None
     release_s: Estimate | None = None
+    gain: Estimate | None = None
+    input_name: str = ""
+    input_unit: str = ""
     first_s: float
     last_s: float
     cycles: float
@@ -1654,6 +1669,519 @@ def _amount(value: float, unit: str, digits: int = 3) -> str:
 
 
 # --------------------------------------------------------------------------------------------------
+# Motion under a measured input
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Input:
+    """What drives the plant: a column, and force per unit of it where that is known."""
+
+    name: str
+    unit: str
+    values: Real
+    force_per_unit: float | None
+    why_no_force: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Driven:
+    """The linear model of a driven plant over one stretch of a log."""
+
+    start: StateSpace
+    period_s: float
+    drive: Real
+    position: Real
+
+    def columns(self, stiffness: float, damping: float, delay_s: float) -> Real:
+        """Positions by a unit gain, a unit position, a unit speed and a unit constant force."""
+        a = self.start.a.copy()
+        a[1, 0], a[1, 1] = -stiffness, -damping
+        sampled = sample(replace(self.start, a=a), self.period_s, delay_s)
+        size = a.shape[0]
+        begins = np.zeros((size, 2))
+        begins[0, 0] = begins[1, 1] = 1.0
+        if self.start.names[-1] == "filtered position":
+            begins[-1, 0] = 1.0
+        return _held_motion(sampled, self.drive, begins)
+
+
+def _held_motion(sampled: SampledPlant, drive: Real, begins: Real) -> Real:
+    """Measured position, column by column: by the drive, by each first state, by a unit force.
+
+    The recursion is run in blocks: inside a block a Toeplitz matrix, from block to block the
+    states, so that a long log costs matrix products and few turns of a loop.
+    """
+    size, count = sampled.psi.shape[0], drive.size
+    block = int(min(max(16.0, math.sqrt(count)), 512.0))
+    turns = -(-count // block)
+
+    # States, the drive acting before (for the fraction of the delay), a constant 1 (for the force).
+    step = np.zeros((size + 2, size + 2))
+    step[:size, :size] = np.eye(size) + sampled.psi
+    step[:size, size] = sampled.gamma1
+    step[:size, size + 1] = sampled.gamma_force
+    step[-1, -1] = 1.0
+    enter = np.concatenate([sampled.gamma0, [1.0, 0.0]])
+    row = np.concatenate([sampled.c_measured, [0.0, 0.0]])
+
+    looks = np.empty((block + 1, size + 2))
+    reach = np.empty((size + 2, block))
+    looks[0], reach[:, -1] = row, enter
+    for k in range(block):
+        looks[k + 1] = looks[k] @ step
+        if k + 1 < block:
+            reach[:, block - 2 - k] = step @ reach[:, block - 1 - k]
+    pulse = np.concatenate([[0.0], looks[:block] @ enter])
+    at = np.arange(block)
+    behind = at[:, np.newaxis] - at
+    inner = np.where(behind > 0, pulse[np.maximum(behind, 0)], 0.0)
+    leap = np.linalg.matrix_power(step, block)
+
+    acting = np.zeros(turns * block)
+    whole = sampled.whole_delay
+    if whole < count:
+        acting[whole:count] = drive[: count - whole] - drive[0]
+    blocks = acting.reshape(turns, block).T
+    entered = reach @ blocks
+    channels = begins.shape[1] + 2
+    states = np.zeros((turns, size + 2, channels))
+    states[0, :size, 1:-1] = begins
+    states[0, -1, -1] = 1.0
+    for turn in range(turns - 1):
+        states[turn + 1] = leap @ states[turn]
+        states[turn + 1, :, 0] += entered[:, turn]
+    out = np.einsum("ks,tsc->tkc", looks[:block], states)
+    out[:, :, 0] += (inner @ blocks).T
+    return np.asarray(out.reshape(turns * block, channels)[:count])
+
+
+def _input_of(log: Log, loop: Loop | None) -> _Input | None:
+    """The column that drives, the nearest to the force first; None where none changes."""
+    rotary = log.position_unit == "rad"
+    force_unit = "N m" if rotary else "N"
+    known = log.position_unit != "count"
+    if log.force is not None and np.ptp(log.force) > 0.0:
+        return _Input(
+            name="force",
+            unit=log.force_unit,
+            values=log.force,
+            force_per_unit=1.0 if known else None,
+            why_no_force="the position is in counts; give the loop file for its scale",
+        )
+    actuator = loop.actuator if loop is not None else None
+    why = f"{force_unit} per {{}} is not known; give the loop file, or log the force"
+    if log.current_a is not None and np.ptp(log.current_a) > 0.0:
+        return _Input(
+            name="current",
+            unit="A",
+            values=log.current_a,
+            force_per_unit=actuator.force_constant if actuator is not None and known else None,
+            why_no_force=why.format("A"),
+        )
+    if log.output_code is not None and np.ptp(log.output_code) > 0.0:
+        if actuator is not None and actuator.drive == "voltage":
+            raise IdentificationError(
+                "output",
+                "voltage drive",
+                "",
+                "with voltage drive the current depends on the motion",
+                "log the current, too",
+            )
+        scale = None
+        if actuator is not None and known:
+            scale = actuator.polarity * actuator.step * actuator.force_constant
+        return _Input(
+            name="output",
+            unit="code",
+            values=log.output_code,
+            force_per_unit=scale,
+            why_no_force=why.format("code"),
+        )
+    return None
+
+
+def _longest_stretch(log: Log) -> tuple[int, int]:
+    """Rows of the longest stretch without missing samples."""
+    breaks = np.flatnonzero(np.diff(log.index) > 1) + 1
+    edges = np.concatenate([[0], breaks, [log.samples]])
+    longest = int(np.argmax(np.diff(edges)))
+    return int(edges[longest]), int(edges[longest + 1])
+
+
+def _projected(columns: Real, position: Real) -> Real:
+    """What the best mix of columns leaves of the position."""
+    norms = np.sqrt(np.einsum("ij,ij->j", columns, columns))
+    basis, _ = np.linalg.qr(columns / np.where(norms > 0.0, norms, 1.0))
+    return np.asarray(basis @ (basis.T @ position) - position)
+
+
+def _filtered_guesses(model: _Driven) -> list[Real]:
+    """First guesses of stiffness and damping over mass and the delay, the better first.
+
+    State-variable filters 1/(s + c)^3 of several corners turn the differential equation into a
+    linear one for each delay (Young and Jakeman, 1980, from memory); here by Fourier transform,
+    the input as held, with the transient of the ends left out.
+    """
+    period, count = model.period_s, model.position.size
+    span = count * period
+    found: list[Real] = []
+    for corner in np.geomspace(12.0 / span, 0.6 / period, 8):
+        settle = int(8.0 / (corner * period))
+        if settle > 0.6 * count:
+            continue
+        size = 1 << (count + 2 * settle - 1).bit_length()
+        omega = 2.0 * np.pi * np.fft.rfftfreq(size, period)
+        low_pass = 1.0 / (1j * omega / corner + 1.0) ** 3
+        # Held samples lag half a period, and their upper images are weaker.
+        hold = np.exp(-0.5j * omega * period) * np.sinc(omega * period / (2.0 * np.pi))
+
+        def spectrum(values: Real, size: int = size) -> Complex:
+            extended = np.concatenate([values, np.full(size - count, values[-1])])
+            return np.asarray(np.fft.rfft(extended - values[0]))
+
+        y = spectrum(model.position) * low_pass
+        u = spectrum(model.drive) * low_pass * hold
+        keep = slice(settle, count)
+        plain = np.fft.irfft(y, size)[keep]
+        speed = np.fft.irfft(y * 1j * omega, size)[keep]
+        acceleration = np.fft.irfft(y * (1j * omega) ** 2, size)[keep]
+        # Only one column depends on the delay: the others are taken out of it once.
+        others = np.stack([-plain, -speed, np.ones(plain.size)], axis=1)
+        norms = np.sqrt(np.einsum("ij,ij->j", others, others))
+        basis, _ = np.linalg.qr(others / np.where(norms > 0.0, norms, 1.0))
+        apart = acceleration - basis @ (basis.T @ acceleration)
+        delays = 0.5 * period * np.arange(min(2 * MOST_DELAY, max(2, count // 20)) + 1)
+        pushed = np.fft.irfft(u * np.exp(-1j * np.outer(delays, omega)), size)[:, keep]
+        pushed_apart = pushed - (pushed @ basis) @ basis.T
+        strength = np.einsum("ij,ij->i", pushed_apart, pushed_apart)
+        gains = (pushed_apart @ apart) / np.where(strength > 0.0, strength, np.inf)
+        best = int(np.argmax(gains * gains * strength))
+        left = acceleration - gains[best] * pushed[best]
+        solution = np.linalg.lstsq(others, left, rcond=None)[0]
+        found.append(
+            np.array([max(float(solution[0]), 0.0), max(float(solution[1]), 0.0), delays[best]])
+        )
+    ranked = []
+    for guess in found:
+        missed = _projected(model.columns(*guess), model.position)
+        ranked.append((float(missed @ missed), guess))
+    ranked.sort(key=lambda pair: pair[0])
+    return [guess for _, guess in ranked]
+
+
+def _response(log: Log, loop: Loop | None, source: _Input) -> Identification:
+    """Identify a plant that is driven by a measured input."""
+    first, last = _longest_stretch(log)
+    if last - first < 40:
+        raise IdentificationError(
+            log.source or "log",
+            float(last - first),
+            "samples without a gap",
+            "too few to follow the motion",
+            "log at least some hundred in a row",
+        )
+    position, drive = log.position[first:last], source.values[first:last]
+    if float(np.ptp(position)) <= 2.0 * (log.position_step or 0.0):
+        raise IdentificationError(
+            "position",
+            float(np.ptp(position)),
+            f"{log.position_unit} from end to end",
+            "the position does not move",
+            f"drive it harder, or see whether the {source.name} is that of this axis",
+        )
+    if not float(np.ptp(drive)) > 0.0:
+        raise IdentificationError(
+            source.name,
+            float(drive[0]),
+            source.unit,
+            "does not change in the longest stretch without a gap",
+            "log without gaps while it changes",
+        )
+    actuator = loop.actuator if loop is not None else None
+    corner = actuator.bandwidth_rad_per_s if actuator is not None else None
+    filter_corner = loop.sensor.filter_corner_rad_per_s if loop is not None else None
+    unit_mass = Plant(
+        motion="rotary" if log.position_unit == "rad" else "linear",
+        mass=1.0,
+        current_bandwidth_rad_per_s=corner if source.name == "output" else None,
+        sensor_corner_rad_per_s=filter_corner,
+    )
+    # The scale of the input moves into the gain; near one it keeps the columns alike.
+    swing = float(np.ptp(drive))
+    model = _Driven(
+        start=state_space(unit_mass),
+        period_s=log.period_s,
+        drive=(drive - drive[0]) / swing,
+        position=position - position[0],
+    )
+    fit, full = _driven_fit(model, loop)
+    return _driven_identification(log, source, swing, model, fit, full, (first, last))
+
+
+def _busiest(model: _Driven) -> _Driven:
+    """The part of a long log in which the drive changes most, for the search."""
+    count = model.position.size
+    if count <= _SEARCHED:
+        return model
+    changes = np.concatenate([[0.0], np.cumsum(np.diff(model.drive) ** 2)])
+    begin = int(np.argmax(changes[_SEARCHED - 1 :] - changes[: count - _SEARCHED + 1]))
+    # Not from the very first change on: what was before tells how it stood.
+    begin = max(0, begin - _SEARCHED // 8)
+    part = slice(begin, begin + _SEARCHED)
+    return replace(model, drive=model.drive[part], position=model.position[part])
+
+
+def _three_number_fit(model: _Driven, guess: Real) -> Fit:
+    """Stiffness and damping over mass, and delay, of least output error."""
+    period = model.period_s
+    rate = max(math.sqrt(float(guess[0])), 1.0 / (period * model.position.size))
+    scale = np.array([rate**2, rate, period])
+
+    def residuals(p: Real) -> Real:
+        return _projected(model.columns(*p), model.position)
+
+    def slopes(p: Real, left: Real) -> Real:
+        out = np.empty((left.size, 3))
+        for column in range(3):
+            step = 1e-6 * max(abs(float(p[column])), 1e-2 * float(scale[column]))
+            moved = p.copy()
+            moved[column] += step
+            out[:, column] = (residuals(moved) - left) / step
+        return out
+
+    return least_squares(
+        residuals,
+        guess,
+        scale=scale,
+        low=np.zeros(3),
+        high=np.array([np.inf, np.inf, (MOST_DELAY + 10) * period]),
+        jacobian=slopes,
+        tolerance=1e-9,
+        settled=1e-5,
+        turns=60,
+    )
+
+
+def _driven_fit(model: _Driven, loop: Loop | None) -> tuple[Fit, Fit]:
+    """Output error over stiffness, damping and delay; the other numbers follow linearly.
+
+    Returns the fit of the three, and one with all seven: stiffness and damping over mass, delay,
+    gain, first position, first speed, constant acceleration.
+    """
+    period = model.period_s
+    small = _busiest(model)
+    guesses = _filtered_guesses(small)[:3]
+    if loop is not None:
+        m = loop.mechanics
+        near = np.array([m.stiffness / m.mass, m.damping / m.mass, loop.processor.delay_s])
+        guesses.append(near)
+    if not guesses:
+        usual = 12.0 / (period * small.position.size)
+        guesses = [np.array([usual**2, usual, period])]
+    fits = [_three_number_fit(small, guess) for guess in guesses]
+    best = min(fits, key=lambda f: f.cost)
+    if small is not model:
+        best = _three_number_fit(model, best.values)
+    columns = model.columns(*best.values)
+    linear = np.linalg.lstsq(columns, model.position, rcond=None)[0]
+    rate = max(math.sqrt(float(best.values[0])), 1.0 / (period * model.position.size))
+    jacobian = np.empty((model.position.size, 7))
+    jacobian[:, 3:] = columns
+    for column, scale_of in enumerate((rate**2, rate, period)):
+        step = 1e-5 * max(abs(float(best.values[column])), 1e-2 * scale_of)
+        up, down = best.values.copy(), best.values.copy()
+        up[column] += step
+        down[column] = max(down[column] - step, 0.0)
+        change = (model.columns(*up) - model.columns(*down)) @ linear
+        jacobian[:, column] = change / (up[column] - down[column])
+    whole = Fit(
+        values=np.concatenate([best.values, linear]),
+        residuals=columns @ linear - model.position,
+        jacobian=jacobian,
+        at_bound=np.concatenate([best.at_bound, np.zeros(4, dtype=bool)]),
+        converged=best.converged,
+    )
+    return best, whole
+
+
+def _driven_identification(
+    log: Log,
+    source: _Input,
+    swing: float,
+    model: _Driven,
+    fit: Fit,
+    full: Fit,
+    rows: tuple[int, int],
+) -> Identification:
+    """Turn a fitted model into quantities with intervals, and say what is missing."""
+    count = model.position.size
+    turn = 2.0 * math.pi
+    covariance, white = _covariance(full, range(7))
+    stiffness, damping, delay, gain = (float(v) for v in full.values[:4])
+
+    # Without the drive the free motion alone must explain clearly less.
+    undriven = _projected(model.columns(stiffness, damping, delay)[:, 1:], model.position)
+    drop = count * math.log(max(float(undriven @ undriven), 1e-300) / max(full.cost, 1e-300))
+    if drop < 40.0 + 4.0 * math.log(count):
+        raise IdentificationError(
+            source.name,
+            swing,
+            f"{source.unit} from end to end",
+            "moves the position too little to tell anything",
+            "drive it harder, or longer",
+        )
+
+    def of(value: float, gradient: Sequence[float], *, positive: bool = True) -> Estimate:
+        slope = np.zeros(7)
+        slope[: len(gradient)] = gradient
+        return _estimate(value, float(slope @ covariance @ slope), positive=positive)
+
+    unknown: list[tuple[str, str]] = []
+    square = of(stiffness, [1.0], positive=False)
+    frequency = ratio = None
+    # Three deviations and more: a free mass must not ring by chance.
+    sprung = stiffness > 1.7 * (square.high - stiffness)
+    if sprung:
+        omega = math.sqrt(stiffness)
+        frequency = Estimate(
+            value=omega / turn, low=math.sqrt(square.low) / turn, high=math.sqrt(square.high) / turn
+        )
+        ratio = of(
+            damping / (2.0 * omega), [-damping / (4.0 * stiffness * omega), 1.0 / (2.0 * omega)]
+        )
+    else:
+        why = "no stiffness shows clearly: the mass is free, or the log too short for its return"
+        unknown += [("natural_frequency_hz", why), ("damping_ratio", why)]
+    mass = viscous = spring = None
+    per_unit = gain / swing
+    if source.force_per_unit is None:
+        why = source.why_no_force
+        unknown += [("mass", why), ("damping", why), ("stiffness", why)]
+    else:
+        scale = abs(source.force_per_unit / per_unit)
+        relative = _Z95 * math.sqrt(max(float(covariance[3, 3]), 0.0)) / abs(gain)
+        if relative < 0.5:
+            mass = Estimate(
+                value=scale, low=scale / (1.0 + relative), high=scale / (1.0 - relative)
+            )
+            viscous = of(damping * scale, [0.0, scale, 0.0, -damping * scale / gain])
+            spring = of(stiffness * scale, [scale, 0.0, 0.0, -stiffness * scale / gain])
+        else:
+            why = f"the {source.name} moved the mass too little, and the friction or spring instead"
+            unknown += [("mass", why), ("damping", why), ("stiffness", why)]
+    late = of(delay, [0.0, 0.0, 1.0])
+    if late.high - late.low > 20.0 * log.period_s:
+        unknown.append(("delay_s", f"the {source.name} changes too slowly to tell it"))
+    unknown.append(
+        (
+            "friction",
+            "a log with an input is fitted with viscous damping only; let it ring freely to tell "
+            "the kinds of damping",
+        )
+    )
+    noise = _difference_noise(full.residuals)
+    left = math.sqrt(full.cost / count)
+    rest = None
+    if sprung:
+        away = float(full.values[6]) - gain * float(source.values[rows[0]]) / swing
+        rest = of(
+            float(log.position[rows[0]]) + away / stiffness,
+            [
+                -away / stiffness**2,
+                0.0,
+                0.0,
+                -float(source.values[rows[0]]) / swing / stiffness,
+                0.0,
+                0.0,
+                1.0 / stiffness,
+            ],
+            positive=False,
+        )
+    seen = of(damping, [0.0, 1.0])
+    complaints = [str(complaint) for complaint in log.complaints]
+    complaints += _driven_doubts(log, source, per_unit, rows, left, noise, white, fit)
+    first_s = float(log.index[rows[0]]) * log.period_s
+    return Identification(
+        kind="response",
+        position_unit=log.position_unit,
+        natural_frequency_hz=frequency,
+        damping_ratio=ratio,
+        mass=mass,
+        damping=viscous,
+        stiffness=spring,
+        delay_s=None if "delay_s" in dict(unknown) else late,
+        unknown=tuple(unknown),
+        damping_kinds=("viscous",) if seen.low > 0.0 else (),
+        undecided=("coulomb", "quadratic"),
+        decay_rate_per_s=of(0.5 * damping, [0.0, 0.5]),
+        gain=of(per_unit, [0.0, 0.0, 0.0, 1.0 / swing], positive=False),
+        input_name=source.name,
+        input_unit=source.unit,
+        offset=rest,
+        first_s=first_s,
+        last_s=first_s + (count - 1) * log.period_s,
+        cycles=0.0 if frequency is None else frequency.value * count * log.period_s,
+        residual_rms=left,
+        noise_rms=noise,
+        rate_hz=log.rate_hz,
+        samples=log.samples,
+        complaints=tuple(complaints),
+    )
+
+
+def _driven_doubts(
+    log: Log,
+    source: _Input,
+    per_unit: float,
+    rows: tuple[int, int],
+    left: float,
+    noise: float,
+    white: bool,
+    fit: Fit,
+) -> list[str]:
+    """What is odd about the fit of a driven motion."""
+    out = []
+    unit = log.position_unit
+    if not fit.converged:
+        out.append("the fit did not settle; its values are not to be relied on")
+    if rows[1] - rows[0] < log.samples:
+        out.append(
+            f"only the longest stretch without a gap is used: lines {int(log.lines[rows[0]])} to "
+            f"{int(log.lines[rows[1] - 1])}"
+        )
+    sign = per_unit if source.force_per_unit is None else per_unit * source.force_per_unit
+    if sign < 0.0:
+        out.append(
+            f"the position falls when the {source.name} rises: a polarity is wrong, and a loop "
+            f"closed like this runs away"
+        )
+    if log.reference is not None and source.name == "output" and np.ptp(log.reference) > 0.0:
+        out.append(
+            "the output may come from a closed loop; noise that goes round in it biases the fit "
+            "where the motion does not stand far above the noise"
+        )
+    if source.name != "output":
+        out.append(
+            f"the {source.name} is taken as held from sample to sample; where it is measured and "
+            f"smooth, the delay comes out up to half a sample off"
+        )
+    coarse = log.position_step is not None and noise < 0.4 * log.position_step
+    if coarse and log.position_step is not None:
+        out.append(
+            f"noise of {_amount(noise, unit)} rms is less than half a sensor step of "
+            f"{_amount(log.position_step, unit)}: what is left is rounding and not noise, and the "
+            f"intervals are not to be relied on"
+        )
+    if left > 1.2 * noise and not white:
+        out.append(
+            f"the model leaves {_amount(left, unit)} rms where the noise is "
+            f"{_amount(noise, unit)}: something is not in it, such as friction, a stop, a second "
+            f"mode, or a force that is not logged"
+        )
+    return out
+
+
+# --------------------------------------------------------------------------------------------------
 # For everyone
 
 
@@ -1665,7 +2193,8 @@ def identify_log(log: Log, kind: str | None = None, loop: Loop | None = None) ->
     log : Log
         The log.
     kind : str or None
-        "ring_down" for a free decay; None to see from the log.
+        "ring_down" for a free decay, "response" for a motion under a measured output, current or
+        force; None to see from the log: a response where one of these columns changes.
     loop : Loop or None
         The loop file of the plant, for scales and plausibility.
 
@@ -1684,10 +2213,23 @@ def identify_log(log: Log, kind: str | None = None, loop: Loop | None = None) ->
     -----
     The methods and their limits are described in docs/identify.md.
     """
-    if kind not in {None, "ring_down"}:
-        raise IdentificationError("kind", kind, "", 'must be "ring_down"', "leave it out")
+    if kind not in {None, "ring_down", "response"}:
+        raise IdentificationError(
+            "kind", kind, "", "must be ring_down or response", "leave it out to see from the log"
+        )
     if loop is not None:
         log = in_units_of(log, loop)
+    source = None if kind == "ring_down" else _input_of(log, loop)
+    if source is not None:
+        return _response(log, loop, source)
+    if kind == "response":
+        raise IdentificationError(
+            log.source or "log",
+            None,
+            "",
+            "no output, current or force changes in it",
+            "log what drives the mass beside its position",
+        )
     return _ring_down(log, loop)
 
 
@@ -1843,9 +2385,12 @@ def identification_text(identification: Identification, loop: Loop | None = None
     i = identification
     unit = i.position_unit
     keys = _ROTARY_KEYS if unit == "rad" else _LINEAR_KEYS
+    what = f"free decay: {i.cycles:.3g} cycles"
+    if i.kind == "response":
+        what = f"motion under the {i.input_name}"
     lines = [
-        f"free decay: {i.cycles:.3g} cycles, {i.first_s:.6g} to {i.last_s:.6g} s, of "
-        f"{i.samples} samples at {format_si(i.rate_hz, 'Hz', 6)}"
+        f"{what}, {i.first_s:.6g} to {i.last_s:.6g} s, of {i.samples} samples at "
+        f"{format_si(i.rate_hz, 'Hz', 6)}"
     ]
     rows: list[tuple[str, Estimate | None, str]] = [
         ("natural frequency", i.natural_frequency_hz, "Hz"),
@@ -1857,6 +2402,7 @@ def identification_text(identification: Identification, loop: Loop | None = None
         ("damping", i.damping, keys["damping"][1]),
         ("stiffness", i.stiffness, keys["stiffness"][1]),
         ("friction", i.friction, keys["friction"][1]),
+        (f"gain of the {i.input_name}", i.gain, f"{unit}/s^2 per {i.input_unit}"),
         ("delay", i.delay_s, "s"),
         ("rest position", i.offset, unit),
         ("let go at", i.release_s, "s"),
@@ -1870,7 +2416,7 @@ def identification_text(identification: Identification, loop: Loop | None = None
         f"{'left by the model':<20}{_amount(i.residual_rms, unit)} rms; noise "
         f"{_amount(i.noise_rms, unit)} rms"
     )
-    if loop is not None and i.mass is None and i.natural_frequency_hz is not None:
+    if loop is not None and i.kind == "ring_down" and i.natural_frequency_hz is not None:
         lines.append(_with_mass(i, loop.mechanics.mass, keys))
     lines += [f"not known: {name.removesuffix('_s')}: {reason}" for name, reason in i.unknown]
     lines += [f"note: {complaint}" for complaint in i.complaints]

@@ -20,6 +20,7 @@ from functools import lru_cache
 import numpy as np
 import pytest
 from loops import reference_loop
+from scipy.linalg import expm
 
 from plant2.identify import (
     KINDS_OF_DAMPING,
@@ -617,7 +618,7 @@ def test_too_short_is_refused() -> None:
 
 
 def test_unknown_kind_is_refused() -> None:
-    with pytest.raises(IdentificationError, match='kind = nonsense: must be "ring_down"'):
+    with pytest.raises(IdentificationError, match="kind = nonsense: must be ring_down"):
         identify_log(held_and_let_go(0.3, (0.6, 0.0, 0.0), seed=1), kind="nonsense")
 
 
@@ -725,3 +726,348 @@ def test_added_mass_tells_the_mass() -> None:
         mass_of_two_decays(found[0], found[0], 0.01)
     with pytest.raises(IdentificationError, match="added_mass = -1"):
         mass_of_two_decays(*found, -1.0)
+
+
+# --------------------------------------------------------------------------------------------------
+# Motion under a measured input
+
+
+MASS, DAMPING, STIFFNESS = 0.05, 0.4, 200.0
+"""The driven plant of these tests: kg, N s/m, N/m."""
+
+
+def exact_step(a: np.ndarray, b: np.ndarray, time_s: float) -> tuple[np.ndarray, np.ndarray]:
+    """Transition and effect of a held input by scipy's matrix exponential."""
+    size = a.shape[0]
+    block = np.zeros((size + 1, size + 1))
+    block[:size, :size], block[:size, size] = a * time_s, b * time_s
+    whole = expm(block)
+    return whole[:size, :size], whole[:size, size]
+
+
+def driven(
+    drive: np.ndarray,
+    *,
+    period_s: float,
+    delay_s: float,
+    mass: float = MASS,
+    damping: float = DAMPING,
+    stiffness: float = STIFFNESS,
+    begin: tuple[float, float] = (0.0, 0.0),
+    bias: float = 0.0,
+    current_corner: float | None = None,
+    friction: float = 0.0,
+) -> np.ndarray:
+    """Sampled position under a held force, sample by sample, each in two parts for the delay.
+
+    With friction each part is cut into a hundred, in which its sign is that of the speed.
+    """
+    a = np.array([[0.0, 1.0], [-stiffness / mass, -damping / mass]])
+    b = np.array([0.0, 1.0 / mass])
+    x = np.array(begin, dtype=np.float64)
+    if current_corner is not None:
+        wide = np.zeros((3, 3))
+        wide[:2, :2], wide[:2, 2], wide[2, 2] = a, b, -current_corner
+        a, b = wide, np.array([0.0, 0.0, current_corner])
+        x = np.array([*begin, drive[0]])
+    whole = int(delay_s / period_s + 1e-9)
+    late_s = delay_s - whole * period_s
+    cuts = 100 if friction else 1
+    parts = [exact_step(a, b, part / cuts) for part in (late_s, period_s - late_s)]
+    out = np.empty(drive.size)
+    for k in range(drive.size):
+        out[k] = x[0]
+        older, old = drive[max(k - whole - 1, 0)], drive[max(k - whole, 0)]
+        for (transition, effect), force in zip(parts, (older, old), strict=True):
+            for _ in range(cuts):
+                held = force + bias
+                if friction:
+                    if x[1] == 0.0 and abs(held - stiffness * x[0]) <= friction:
+                        break
+                    side = math.copysign(1.0, x[1] if x[1] else held - stiffness * x[0])
+                    after = transition @ x + effect * (held - side * friction)
+                    x = np.array([after[0], 0.0]) if after[1] * side < 0.0 else after
+                else:
+                    x = transition @ x + effect * held
+    return out
+
+
+def excitation(kind: str, count: int, period_s: float) -> np.ndarray:
+    """A step after a fifth, a sweep from 1 to 60 Hz, or a pseudo-random sequence; 0.2 N."""
+    t = np.arange(count) * period_s
+    if kind == "step":
+        return np.where(np.arange(count) >= count // 5, 0.2, 0.0)
+    if kind == "sweep":
+        return 0.2 * np.sin(2.0 * np.pi * (t + 29.5 / t[-1] * t * t))
+    bits = 2.0 * np.random.default_rng(99).integers(0, 2, count // 10 + 1) - 1.0
+    return 0.2 * np.repeat(bits, 10)[:count]
+
+
+@lru_cache(maxsize=16)
+def clean_response(
+    kind: str, count: int, period_s: float, mass: float, damping: float, stiffness: float
+) -> np.ndarray:
+    """A response without noise, from a first motion and with a standing force."""
+    drive = excitation(kind, count, period_s)
+    return driven(
+        drive,
+        period_s=period_s,
+        delay_s=1.35 * period_s,
+        mass=mass,
+        damping=damping,
+        stiffness=stiffness,
+        begin=(1e-5, 1e-3),
+        bias=0.01,
+    )
+
+
+def response_log(
+    kind: str,
+    seed: int,
+    *,
+    count: int = 2000,
+    period_s: float = 1e-3,
+    mass: float = MASS,
+    damping: float = DAMPING,
+    stiffness: float = STIFFNESS,
+    noise: float = 2e-6,
+) -> Log:
+    """A noisy log of force and position."""
+    clean = clean_response(kind, count, period_s, mass, damping, stiffness)
+    noisy = clean + 1e-4 + np.random.default_rng(seed).normal(0.0, noise, count)
+    return log_of_samples(noisy, rate_hz=1.0 / period_s, force=excitation(kind, count, period_s))
+
+
+def driven_facts(
+    found: Identification, period_s: float = 1e-3
+) -> dict[str, tuple[Estimate | None, float]]:
+    """Estimates of the driven plant and their truths."""
+    return {
+        "frequency": (found.natural_frequency_hz, math.sqrt(4000.0) / (2.0 * math.pi)),
+        "ratio": (found.damping_ratio, 4.0 / math.sqrt(4000.0)),
+        "mass": (found.mass, MASS),
+        "damping": (found.damping, DAMPING),
+        "stiffness": (found.stiffness, STIFFNESS),
+        "delay": (found.delay_s, 1.35 * period_s),
+        "rest": (found.offset, 1e-4 + 0.01 / STIFFNESS),
+        "gain": (found.gain, 1.0 / MASS),
+    }
+
+
+@pytest.mark.parametrize("kind", ["step", "sweep", "random"])
+@pytest.mark.parametrize("period_s", [1e-3, 2e-4])
+def test_driven_plant_is_measured(kind: str, period_s: float) -> None:
+    found = identify_log(response_log(kind, 1, period_s=period_s))
+    assert (found.kind, found.input_name, found.input_unit) == ("response", "force", "N")
+    for estimate, truth in driven_facts(found, period_s).values():
+        check_within(estimate, truth)
+    assert found.residual_rms == pytest.approx(2e-6, rel=0.1)
+    assert found.noise_rms == pytest.approx(2e-6, rel=0.1)
+    assert found.damping_kinds == ("viscous",)
+    assert [name for name, _ in found.unknown] == ["friction"]
+    assert len(found.complaints) == 1 and "taken as held" in found.complaints[0]
+
+
+@pytest.mark.parametrize("kind", ["step", "sweep", "random"])
+def test_driven_plant_without_noise(kind: str) -> None:
+    """The exact model leaves rounding only: 1e-6 of everything, the fraction of the delay too."""
+    found = identify_log(response_log(kind, 1, noise=1e-12))
+    for estimate, truth in driven_facts(found).values():
+        assert estimate is not None
+        assert estimate.value == pytest.approx(truth, rel=1e-6)
+
+
+@pytest.mark.parametrize("delay", [0.0, 0.4, 1.0, 2.75, 13.2])
+def test_any_delay(delay: float) -> None:
+    drive = excitation("random", 1500, 1e-3)
+    clean = driven(drive, period_s=1e-3, delay_s=delay * 1e-3)
+    noise = np.random.default_rng(3).normal(0.0, 2e-6, drive.size)
+    found = identify_log(log_of_samples(clean + noise, rate_hz=1000.0, force=drive))
+    assert found.delay_s is not None
+    assert found.delay_s.value == pytest.approx(delay * 1e-3, abs=4e-6)
+    check_within(found.mass, MASS)
+
+
+def driven_coverage(kind: str, seeds: range) -> dict[str, float]:
+    """Share of intervals that hold the truth."""
+    held: dict[str, list[bool]] = {}
+    for seed in seeds:
+        for name, pair in driven_facts(identify_log(response_log(kind, seed))).items():
+            held.setdefault(name, []).append(holds(*pair))
+    return {name: float(np.mean(values)) for name, values in held.items()}
+
+
+@pytest.mark.parametrize("kind", ["step", "random"])
+def test_intervals_of_the_driven_plant_hold_the_truth(kind: str) -> None:
+    check_coverage(driven_coverage(kind, range(50)), 50)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("kind", ["step", "sweep", "random"])
+def test_intervals_of_the_driven_plant_hold_the_truth_in_many_logs(kind: str) -> None:
+    check_coverage(driven_coverage(kind, range(1000, 1200)), 200)
+
+
+@pytest.mark.parametrize("damping", [0.0, 0.4])
+def test_free_mass(damping: float) -> None:
+    """No spring: mass and damping, but neither a frequency nor a place of rest."""
+    found = identify_log(response_log("random", 4, damping=damping, stiffness=0.0))
+    check_within(found.mass, MASS)
+    check_within(found.damping, damping)
+    assert found.stiffness is not None
+    assert found.stiffness.low == 0.0 and found.stiffness.high < 1.0
+    assert found.natural_frequency_hz is None and found.damping_ratio is None
+    assert found.offset is None
+    assert dict(found.unknown)["natural_frequency_hz"].startswith("no stiffness shows")
+    assert found.damping_kinds == (("viscous",) if damping else ())
+
+
+def test_strongly_damped_plant() -> None:
+    """Damping ratio 1.6."""
+    found = identify_log(response_log("random", 5, damping=10.0))
+    check_within(found.mass, MASS)
+    check_within(found.damping, 10.0)
+    check_within(found.damping_ratio, 10.0 / (2.0 * math.sqrt(STIFFNESS * MASS)))
+
+
+def test_codes_without_a_loop_file_tell_no_mass() -> None:
+    drive = excitation("random", 1500, 1e-3)
+    clean = driven(drive, period_s=1e-3, delay_s=5e-4)
+    noise = np.random.default_rng(6).normal(0.0, 2e-6, drive.size)
+    code = np.rint(drive * 5000.0)
+    found = identify_log(log_of_samples(clean + noise, rate_hz=1000.0, output_code=code))
+    check_within(found.natural_frequency_hz, math.sqrt(4000.0) / (2.0 * math.pi))
+    check_within(found.gain, 1.0 / MASS / 5000.0)
+    assert found.mass is None and found.stiffness is None and found.damping is None
+    assert dict(found.unknown)["mass"] == (
+        "N per code is not known; give the loop file, or log the force"
+    )
+    assert as_json(found)["unknown"]["mass_kg"].startswith("N per code")
+
+
+def test_loop_file_gives_the_force_of_a_code_and_the_lag_of_the_current_loop() -> None:
+    """10 N/A, 4 A over 2048 codes, 500 Hz current loop: the delay is the delay alone."""
+    loop = reference_loop('actuator.bandwidth="500 Hz"')
+    code = np.rint(excitation("random", 2000, 2e-4) * 100.0)
+    force = code * 4.0 / 2048.0 * 10.0
+    clean = driven(force, period_s=2e-4, delay_s=2.7e-4, current_corner=2.0 * math.pi * 500.0)
+    noise = np.random.default_rng(7).normal(0.0, 2e-6, code.size)
+    counts = np.rint((clean + noise) / loop.sensor.step)
+    log = log_of_samples(counts, rate_hz=5000.0, position_unit="count", output_code=code)
+    found = identify_log(log, loop=loop)
+    check_within(found.mass, MASS)
+    check_within(found.damping, DAMPING)
+    check_within(found.stiffness, STIFFNESS)
+    check_within(found.delay_s, 2.7e-4)
+    plain = identify_log(log)
+    assert plain.mass is None and plain.delay_s is not None
+    # Without the loop file the current loop's 0.32 ms pass for delay.
+    assert plain.delay_s.low > 4e-4
+
+
+def test_current_with_a_loop_file() -> None:
+    loop = reference_loop()
+    drive = excitation("random", 1500, 1e-3)
+    clean = driven(drive, period_s=1e-3, delay_s=5e-4)
+    noise = np.random.default_rng(8).normal(0.0, 2e-6, drive.size)
+    log = log_of_samples(clean + noise, rate_hz=1000.0, current_a=drive / 10.0)
+    found = identify_log(log, loop=loop)
+    assert (found.input_name, found.input_unit) == ("current", "A")
+    check_within(found.mass, MASS)
+    assert identify_log(log).mass is None
+
+
+def test_wrong_polarity_is_said() -> None:
+    log = response_log("random", 9)
+    found = identify_log(log_of_samples(-log.position, rate_hz=1000.0, force=log.force))
+    assert any("a polarity is wrong" in complaint for complaint in found.complaints)
+    check_within(found.mass, MASS)
+
+
+def test_friction_in_a_driven_log_is_suspected() -> None:
+    drive = excitation("random", 1500, 1e-3)
+    clean = driven(drive, period_s=1e-3, delay_s=5e-4, friction=0.02)
+    noise = np.random.default_rng(10).normal(0.0, 2e-6, drive.size)
+    found = identify_log(log_of_samples(clean + noise, rate_hz=1000.0, force=drive))
+    assert any("such as friction" in complaint for complaint in found.complaints)
+
+
+def test_gaps_leave_the_longest_stretch() -> None:
+    log = response_log("random", 11)
+    assert log.force is not None
+    rows = [
+        f"{k},{1e6 * x:.4f},{f:g}"
+        for k, x, f in zip(log.index, log.position, log.force, strict=True)
+        if k not in {300, 301, 1700}
+    ]
+    gappy = log_from_text("time [ms],position [um],force [N]\n" + "\n".join(rows))
+    found = identify_log(gappy)
+    assert any("lines 302 to 1699" in complaint for complaint in found.complaints)
+    check_within(found.mass, MASS)
+    check_within(found.delay_s, 1.35e-3)
+    assert (found.first_s, found.last_s) == pytest.approx((0.302, 1.699))
+
+
+def test_closed_loop_log_is_pointed_out() -> None:
+    log = response_log("random", 12)
+    assert log.force is not None
+    found = identify_log(
+        log_of_samples(
+            log.position,
+            rate_hz=1000.0,
+            output_code=log.force * 1000.0,
+            reference=np.sign(log.force),
+        )
+    )
+    assert any("may come from a closed loop" in complaint for complaint in found.complaints)
+
+
+def test_long_driven_log() -> None:
+    """More samples than the search looks at: the whole log narrows the intervals."""
+    short = identify_log(response_log("random", 13, count=20_000))
+    long = identify_log(response_log("random", 13, count=60_000))
+    for estimate, truth in driven_facts(long).values():
+        check_within(estimate, truth)
+    assert short.mass is not None and long.mass is not None
+    ratio = (short.mass.high - short.mass.low) / (long.mass.high - long.mass.low)
+    assert ratio == pytest.approx(math.sqrt(3.0), rel=0.15)
+
+
+@pytest.mark.parametrize(
+    ("position", "force", "message"),
+    [
+        (np.zeros(500), excitation("random", 500, 1e-3), "the position does not move"),
+        (
+            np.random.default_rng(1).normal(0.0, 1.0, 500),
+            excitation("random", 500, 1e-3),
+            "moves the position too little",
+        ),
+    ],
+    ids=["still", "noise"],
+)
+def test_refused_driven_logs(position: np.ndarray, force: np.ndarray, message: str) -> None:
+    with pytest.raises(IdentificationError, match=message):
+        identify_log(log_of_samples(position, rate_hz=1000.0, force=force))
+
+
+def test_refused_kinds_of_driven_logs() -> None:
+    quiet = held_and_let_go(0.3, (0.6, 0.0, 0.0), seed=1)
+    with pytest.raises(IdentificationError, match="no output, current or force changes"):
+        identify_log(quiet, kind="response")
+    voltage = reference_loop(
+        'actuator.drive="voltage"', 'actuator.resistance="5 ohm"', 'actuator.full_scale="4 V"',
+        'actuator.limit="3 V"',
+    )  # fmt: skip
+    log = response_log("random", 1)
+    assert log.force is not None
+    coded = log_of_samples(log.position, rate_hz=1000.0, output_code=log.force * 1000.0)
+    with pytest.raises(IdentificationError, match="log the current, too"):
+        identify_log(coded, loop=voltage)
+
+
+def test_text_of_a_driven_log() -> None:
+    text = "\n".join(identification_text(identify_log(response_log("random", 14))))
+    assert text.startswith("motion under the force, 0 to 1.999 s, of 2000 samples at 1 kHz")
+    assert re.search(r"^mass +(49\.9|50\.0)\d* g ", text, re.M)
+    assert re.search(r"^delay +1\.3[45]\d* ms ", text, re.M)
+    assert re.search(r"^gain of the force +(19\.9|20\.0)\d* m/s\^2 per N", text, re.M)
