@@ -34,6 +34,7 @@ import hashlib
 import re
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from functools import partial
 from typing import Any
 
 from plant2.equations import (
@@ -48,9 +49,10 @@ from plant2.errors import Plant2Error
 INT_BITS = (16, 32)
 """Widths of ``int`` that the text is proven for. [bit]"""
 
-STEPS_LIMIT = 1_000_000
-"""What the solver may spend on one question, in its own count of steps, so that the answer does not
-depend on the machine. Text as it is emitted takes a few thousand."""
+STEPS = (("QF_LIA", 200_000), ("QF_BV", 4_000_000))
+"""Ways to an answer, linear arithmetic and then words of bits, and what each may spend, in the
+solver's own count of steps, so that the answer does not depend on the machine. Text as it is
+emitted takes a few thousand of the first."""
 
 SECONDS_LIMIT = 20
 """A second fence, for steps that take uncommonly long. [s]"""
@@ -1281,6 +1283,7 @@ class _Solver:
         """Forget every unknown: what follows is another question."""
         self.bounds: list[Any] = []
         self.definitions: list[Any] = []
+        self.spans: dict[str, int] = {}
 
     def number(self, value: int) -> Any:
         return self.z3.IntVal(value, self.context)
@@ -1290,6 +1293,7 @@ class _Solver:
         self.variables += 1
         x = self.z3.Int(f"{name}.{self.variables}", self.context)
         self.bounds += [x >= low, x <= high]
+        self.spans[str(x)] = max(-low, high)
         return x
 
     def floor(self, x: Any, places: int) -> Any:
@@ -1313,32 +1317,131 @@ class _Solver:
     def term(self, value: Any) -> Any:
         return self.number(value) if isinstance(value, int) else value
 
-    def differ(self, a: Any, b: Any, *, exactly: bool = False) -> tuple[bool | None, Any]:
-        """Whether two terms can differ, and where; None when that stays open.
+    def differ(
+        self, a: Any, b: Any, *, exactly: bool = False
+    ) -> tuple[bool | None, Callable[[Any], int] | None]:
+        """Whether two terms can differ, and the unknowns where they do; None when it stays open.
 
         Without `exactly`, signals that were given a name of their own are any values in their
         ranges: "cannot differ" is then sound, "can differ" is not.
         """
         z3 = self.z3
-        question = z3.simplify(self.term(a) != self.term(b))
-        if z3.is_false(question):
+        question = self.term(a) != self.term(b)
+        if z3.is_false(z3.simplify(question)):
             return False, None
-        solver = z3.SolverFor("QF_LIA", ctx=self.context)
-        solver.set("rlimit", STEPS_LIMIT)
-        solver.set("timeout", 1000 * SECONDS_LIMIT)
-        solver.add(self.z3.And(*self.bounds, question))
-        if exactly:
-            solver.add(*self.definitions)
-        answer = solver.check()
-        if answer == z3.unsat:
-            return False, None
-        if answer == z3.sat:
-            return True, solver.model()
+        known = [*self.bounds, *(self.definitions if exactly else ())]
+        bits = _Bits(z3, self.context, self.spans)
+        for theory, steps in STEPS:
+            solver = z3.SolverFor(theory, ctx=self.context)
+            solver.set("rlimit", steps)
+            solver.set("timeout", 1000 * SECONDS_LIMIT)
+            formula = z3.And(*known, question)
+            solver.add(formula if theory == "QF_LIA" else bits.formula(formula))
+            answer = solver.check()
+            if answer == z3.unsat:
+                return False, None
+            if answer == z3.sat:
+                read = self.value if theory == "QF_LIA" else bits.value
+                return True, partial(read, solver.model())
         return None, None
+
+    def value(self, model: Any, x: Any) -> int:
+        """An unknown in a model."""
+        return int(model.eval(x, model_completion=True).as_long())
 
     def is_plain(self, term: Any) -> bool:
         """A number or an unknown, which gains nothing from another name."""
         return bool(self.z3.is_int_value(term) or self.z3.is_const(term))
+
+
+class _Bits:
+    """The same formula on words of bits that are wide enough for every value in it.
+
+    Linear arithmetic searches long where a sum must hit a remainder; bits know remainders.
+    """
+
+    def __init__(self, z3: Any, context: Any, spans: Mapping[str, int]) -> None:
+        self.z3, self.context, self.spans = z3, context, spans
+        self.width = 0
+
+    def formula(self, term: Any) -> Any:
+        """The formula, on one width for all of it."""
+        widest: dict[int, int] = {}
+        self.magnitude(term, widest)
+        self.width = max(widest.values()).bit_length() + 1
+        return self.translated(term, {})
+
+    def magnitude(self, term: Any, known: dict[int, int]) -> int:
+        """No value of the term, nor of anything in it, is larger; 1 for true and false."""
+        key = term.get_id()
+        if key not in known:
+            z3 = self.z3
+            parts = [self.magnitude(t, known) for t in term.children()]
+            kind = term.decl().kind()
+            if z3.is_int_value(term):
+                size = abs(term.as_long())
+            elif z3.is_const(term):
+                size = self.spans[str(term)]
+            elif kind in (z3.Z3_OP_ADD, z3.Z3_OP_SUB):
+                size = sum(parts)
+            elif kind == z3.Z3_OP_MUL:
+                size = 1
+                for part in parts:
+                    size *= part
+            else:
+                # Negation, floor division, a choice, or a comparison.
+                size = max(1, *parts)
+            known[key] = size
+        return known[key]
+
+    def translated(self, term: Any, known: dict[int, Any]) -> Any:
+        key = term.get_id()
+        if key not in known:
+            known[key] = self.outermost(term, [self.translated(t, known) for t in term.children()])
+        return known[key]
+
+    def outermost(self, term: Any, parts: list[Any]) -> Any:
+        z3 = self.z3
+        if z3.is_int_value(term):
+            return z3.BitVecVal(term.as_long(), self.width, self.context)
+        if z3.is_const(term):
+            return self.unknown(term)
+        kind = term.decl().kind()
+        if kind == z3.Z3_OP_IDIV:
+            divisor = term.children()[1].as_long()
+            if divisor < 1 or divisor & (divisor - 1):
+                raise _refuse("proof", "divides by something other than a power of two")
+            return parts[0] >> (divisor.bit_length() - 1)
+        made: dict[int, Callable[[], Any]] = {
+            z3.Z3_OP_ADD: lambda: sum(parts[1:], parts[0]),
+            z3.Z3_OP_SUB: lambda: parts[0] - sum(parts[2:], parts[1]),
+            z3.Z3_OP_MUL: lambda: self.product(parts),
+            z3.Z3_OP_UMINUS: lambda: -parts[0],
+            z3.Z3_OP_ITE: lambda: z3.If(*parts),
+            z3.Z3_OP_LT: lambda: parts[0] < parts[1],
+            z3.Z3_OP_LE: lambda: parts[0] <= parts[1],
+            z3.Z3_OP_GT: lambda: parts[0] > parts[1],
+            z3.Z3_OP_GE: lambda: parts[0] >= parts[1],
+            z3.Z3_OP_EQ: lambda: parts[0] == parts[1],
+            z3.Z3_OP_DISTINCT: lambda: parts[0] != parts[1],
+            z3.Z3_OP_AND: lambda: z3.And(*parts),
+        }
+        return made[kind]()
+
+    def product(self, parts: list[Any]) -> Any:
+        total = parts[0]
+        for part in parts[1:]:
+            total = total * part
+        return total
+
+    def unknown(self, term: Any) -> Any:
+        return self.z3.BitVec(str(term), self.width, self.context)
+
+    def value(self, model: Any, x: Any) -> int:
+        """An unknown of the first formula in the model of this one."""
+        if self.z3.is_int_value(x):
+            return int(x.as_long())
+        return int(model.eval(self.unknown(x), model_completion=True).as_signed_long())
 
 
 @dataclass(slots=True)
@@ -1373,7 +1476,7 @@ def _equal(controller: WordController, program: _Program, task: _Task, solver: _
         # A word that can take only one value is that number for both sides.
         before[name] = value.term
     result, after = walker.call(task.function, arguments, state)
-    named = dict(walker.named)
+    locals_at_end = dict(walker.named)
     if task.fixed:
         # With the rest of the arguments fixed: the same terms as the function that takes them all.
         more = [walker.point(controller.word_bits, x) for x in task.fixed.values()]
@@ -1387,7 +1490,7 @@ def _equal(controller: WordController, program: _Program, task: _Task, solver: _
     # The text's values by what they are for callers, and by the local that bears a signal's name.
     text: dict[str, Any] = {} if result is None else {"returned": result.term}
     text |= {name: value.term for name, value in after.items()}
-    local = {e.name: named[e.name] for e in task.equations if e.name in named}
+    local = {e.name: locals_at_end[e.name] for e in task.equations if e.name in locals_at_end}
     terms = {name: value.term for name, value in local.items()}
     found: list[Obligation] = []
 
@@ -1419,15 +1522,14 @@ def _equal(controller: WordController, program: _Program, task: _Task, solver: _
     for what in words:
         subject = "the returned value" if what == "returned" else f"state word {what}"
         statement = f"{subject} is what the words give"
-        differs, model = solver.differ(text[what], words[what])
+        differs, values = solver.differ(text[what], words[what])
         if differs is not False and solver.definitions:
-            differs, model = solver.differ(text[what], words[what], exactly=True)
+            differs, values = solver.differ(text[what], words[what], exactly=True)
         proven = None if differs is None else not differs
         found.append(Obligation(name=task.function, what=statement, proven=proven))
-        if proven is False:
+        if values is not None:
             inputs, start = (
-                {n: model.eval(x, model_completion=True).as_long() for n, x in side.items()}
-                for side in (given, before)
+                {name: values(x) for name, x in side.items()} for side in (given, before)
             )
             return _Verdict(found, _replayed(controller, program, task, inputs, start, what))
         if proven is None:
@@ -1441,7 +1543,7 @@ def _is_floor(program: _Program, solver: _Solver, function: _Function, places: i
     if key not in solver.floors:
         (bits,) = (k for _, k in function.parameters if isinstance(k, int))
         span = (_least(bits), _most(bits))
-        kept = solver.bounds, solver.definitions
+        kept = solver.bounds, solver.definitions, solver.spans
         solver.begin()
         x = solver.variable("x", *span)
         walker = _Walker(program, 32, solver)
@@ -1457,7 +1559,7 @@ def _is_floor(program: _Program, solver: _Solver, function: _Function, places: i
             and not walker.alarms
             and solver.differ(result.term, solver.floor(x, places))[0] is False
         )
-        solver.bounds, solver.definitions = kept
+        solver.bounds, solver.definitions, solver.spans = kept
     return solver.floors[key]
 
 

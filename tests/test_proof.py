@@ -675,7 +675,7 @@ def study(
         if what in ("equivalent", "undecided"):
             tell(f"{what}: {fault.kind}: {fault.name}")
         if what == "equivalent":
-            judge_equivalent(fault, controller, 60)
+            judge_equivalent(fault, controller, 20)
         found = None if record is None else record.counterexample
         if found is not None:
             judge_counterexample(fault, controller, found)
