@@ -28,12 +28,13 @@ from plant2.logs import Log, in_units_of
 from plant2.loopfile import Loop
 from plant2.plant import Plant, StateSpace, state_space
 from plant2.quantity import format_si
-from plant2.sampled import SampledPlant, sample
+from plant2.sampled import SampledPlant, propagate, sample, split_delay
 from plant2.solve import Fit, least_squares
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Kinds = tuple[str, ...]
+Pair = tuple[float, float]
 
 KINDS_OF_DAMPING: Kinds = ("viscous", "coulomb", "quadratic")
 """Kinds of damping that are told apart."""
@@ -46,6 +47,9 @@ DOUBTFUL = 2.0
 
 AVERAGED_FROM_CYCLES = 150.0
 """From this many cycles on, amplitudes of blocks are fitted, before single samples."""
+
+MOST_WITH_FRICTION = 6000
+"""Friction under a measured input is looked for in logs of up to this many samples."""
 
 MOST_DELAY = 40
 """Delays up to this many samples are looked for."""
@@ -1869,6 +1873,174 @@ def _filtered_guesses(model: _Driven) -> list[Real]:
     return [guess for _, guess in ranked]
 
 
+# --------------------------------------------------------------------------------------------------
+# Motion under a measured input, with friction
+
+
+def _rubbing_motion(p: Real, drive: Real, period_s: float) -> Real:
+    """Sampled position with Coulomb friction, exact between the events.
+
+    Values are stiffness and damping over mass, delay, gain, first position, first speed, constant
+    acceleration, friction over mass. Between two reversals friction is a constant force; where the
+    mass stands it stays as long as spring and drive stay within the friction.
+    """
+    square, rate, delay, gain, x, v, bias, friction = (float(value) for value in p)
+    whole, fraction = split_delay(delay, period_s)
+    plain = state_space(Plant(mass=1.0, damping=rate, stiffness=square))
+    spans = np.array([fraction * period_s, (1.0 - fraction) * period_s])
+    psi, effect, _ = propagate(plain, spans)
+    pulls = (gain * drive + bias).tolist()
+    first = pulls[0]
+    parts = [
+        (span, *transition.ravel().tolist(), *push.tolist())
+        for span, transition, push in zip(spans.tolist(), psi, effect, strict=True)
+    ]
+    out = []
+    for k in range(drive.size):
+        out.append(x)
+        older = pulls[k - whole - 1] if k > whole else first
+        newer = pulls[k - whole] if k >= whole else first
+        for (span, xx, xv, vx, vv, gx, gv), pull in zip(parts, (older, newer), strict=True):
+            if span == 0.0:
+                continue
+            if v == 0.0:
+                net = pull - square * x
+                if -friction <= net <= friction:
+                    continue
+                acting = pull - math.copysign(friction, net)
+                side = net
+            else:
+                acting = pull - math.copysign(friction, v)
+                side = v
+            after = v + vx * x + vv * v + gv * acting
+            if after * side < 0.0:
+                x, v = _through_turns(x, v, square, rate, pull, friction, span)
+            else:
+                x, v = x + xx * x + xv * v + gx * acting, after
+        if not abs(x) < 1e12:
+            return np.full(drive.size, np.inf)
+    return np.array(out)
+
+
+def _through_turns(
+    x: float, v: float, square: float, rate: float, pull: float, friction: float, span: float
+) -> Pair:
+    """Position and speed after a time in which the speed changes sign."""
+    for _ in range(8):
+        net = pull - square * x
+        if v == 0.0 and abs(net) <= friction:
+            return x, 0.0
+        side = math.copysign(1.0, v if v != 0.0 else net)
+        push = net - rate * v - friction * side
+        end_v = _speed_after(v, push, square, rate, span)
+        if end_v * side >= 0.0:
+            return x + _way_after(v, push, square, rate, span), end_v
+        low, high = 0.0, span
+        for _ in range(60):
+            middle = 0.5 * (low + high)
+            if _speed_after(v, push, square, rate, middle) * side >= 0.0:
+                low = middle
+            else:
+                high = middle
+            if high - low <= 1e-14 * span:
+                break
+        x, v, span = x + _way_after(v, push, square, rate, low), 0.0, span - low
+    return x, v
+
+
+def _speed_after(v: float, push: float, square: float, rate: float, t: float) -> float:
+    """Speed of the linear motion that starts with a speed and an acceleration."""
+    alpha = 0.5 * rate
+    inside = alpha * alpha - square
+    root = math.sqrt(abs(inside))
+    if root * t < 1e-8:
+        even, odd = 1.0, t
+    elif inside < 0.0:
+        even, odd = math.cos(root * t), math.sin(root * t) / root
+    else:
+        even, odd = math.cosh(root * t), math.sinh(root * t) / root
+    return math.exp(-alpha * t) * (v * even + (push + alpha * v) * odd)
+
+
+_GAUSS = (
+    (0.069431844202973714, 0.17392742256872693),
+    (0.33000947820757187, 0.32607257743127307),
+    (0.66999052179242813, 0.32607257743127307),
+    (0.93056815579702629, 0.17392742256872693),
+)
+
+
+def _way_after(v: float, push: float, square: float, rate: float, t: float) -> float:
+    """Way of that motion, by Gauss's rule over a time that is short against its period."""
+    return t * sum(w * _speed_after(v, push, square, rate, u * t) for u, w in _GAUSS)
+
+
+def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> Fit | None:
+    """Fit eight numbers with friction, from several first guesses of it; None where none settles.
+
+    A single first guess gets stuck: the places where the mass stands make the sum of squares
+    ragged.
+    """
+    period = model.period_s
+    lags = sum(1.0 / -float(model.start.a[i, i]) for i in range(2, model.start.a.shape[0]))
+    start = np.concatenate([linear.values, [0.0]])
+    # Quick first-order lags of drive and sensor count as delay here, and are taken off again.
+    start[2] += lags
+    rate = max(math.sqrt(float(start[0])), 1.0 / (period * model.position.size))
+    reach = float(np.ptp(model.position))
+    drive = abs(float(start[3])) * float(np.ptp(model.drive))
+    scale = np.array(
+        [rate**2, rate, period, abs(float(start[3])), reach, reach * rate, reach * rate**2, drive]
+    )
+    low = np.array([0.0, 0.0, 0.0, -np.inf, -np.inf, -np.inf, -np.inf, 0.0])
+    high = np.array([np.inf] * 7 + [2.0 * drive])
+    high[2] = (MOST_DELAY + 10) * period
+
+    def residuals(p: Real) -> Real:
+        return _rubbing_motion(p, model.drive, period) - model.position
+
+    def slopes(p: Real, left: Real) -> Real:
+        out = np.empty((left.size, 8))
+        for column in range(8):
+            step = 1e-6 * max(abs(float(p[column])), 1e-2 * float(scale[column]))
+            moved = p.copy()
+            moved[column] += step
+            out[:, column] = (residuals(moved) - left) / step
+        return out
+
+    ranked = []
+    for share in (0.003, 0.01, 0.03, 0.1, 0.25):
+        for damped in (1.0, 0.3):
+            guess = start.copy()
+            guess[1] *= damped
+            guess[7] = share * drive
+            left = residuals(guess)
+            ranked.append((float(left @ left), guess))
+    ranked.sort(key=lambda pair: pair[0])
+    best: Fit | None = None
+    for _, guess in ranked[:6]:
+        fit = least_squares(
+            residuals,
+            guess,
+            scale=scale,
+            low=low,
+            high=high,
+            jacobian=slopes,
+            tolerance=1e-8,
+            settled=1e-4,
+            turns=40,
+        )
+        if best is None or fit.cost < best.cost:
+            best = fit
+        if best.converged and best.cost < 1.2 * noise**2 * model.position.size:
+            break
+    if best is None or not best.converged:
+        return None
+    values = best.values.copy()
+    values[2] = max(values[2] - lags, 0.0)
+    return replace(best, values=values)
+
+
 def _response(log: Log, loop: Loop | None, source: _Input) -> Identification:
     """Identify a plant that is driven by a measured input."""
     first, last = _longest_stretch(log)
@@ -1915,7 +2087,7 @@ def _response(log: Log, loop: Loop | None, source: _Input) -> Identification:
         position=position - position[0],
     )
     fit, full = _driven_fit(model, loop)
-    return _driven_identification(log, source, swing, model, fit, full, (first, last))
+    return _driven_identification(log, source, swing, model, full, (first, last))
 
 
 def _busiest(model: _Driven) -> _Driven:
@@ -2009,18 +2181,16 @@ def _driven_identification(
     source: _Input,
     swing: float,
     model: _Driven,
-    fit: Fit,
     full: Fit,
     rows: tuple[int, int],
 ) -> Identification:
     """Turn a fitted model into quantities with intervals, and say what is missing."""
     count = model.position.size
     turn = 2.0 * math.pi
-    covariance, white = _covariance(full, range(7))
-    stiffness, damping, delay, gain = (float(v) for v in full.values[:4])
+    rubbed, doubtful = _friction_asked_for(model, full)
 
     # Without the drive the free motion alone must explain clearly less.
-    undriven = _projected(model.columns(stiffness, damping, delay)[:, 1:], model.position)
+    undriven = _projected(model.columns(*full.values[:3])[:, 1:], model.position)
     drop = count * math.log(max(float(undriven @ undriven), 1e-300) / max(full.cost, 1e-300))
     if drop < 40.0 + 4.0 * math.log(count):
         raise IdentificationError(
@@ -2031,8 +2201,12 @@ def _driven_identification(
             "drive it harder, or longer",
         )
 
+    full = rubbed or full
+    covariance, white = _covariance(full, range(full.values.size))
+    stiffness, damping, delay, gain = (float(v) for v in full.values[:4])
+
     def of(value: float, gradient: Sequence[float], *, positive: bool = True) -> Estimate:
-        slope = np.zeros(7)
+        slope = np.zeros(full.values.size)
         slope[: len(gradient)] = gradient
         return _estimate(value, float(slope @ covariance @ slope), positive=positive)
 
@@ -2072,13 +2246,20 @@ def _driven_identification(
     late = of(delay, [0.0, 0.0, 1.0])
     if late.high - late.low > 20.0 * log.period_s:
         unknown.append(("delay_s", f"the {source.name} changes too slowly to tell it"))
-    unknown.append(
-        (
-            "friction",
-            "a log with an input is fitted with viscous damping only; let it ring freely to tell "
-            "the kinds of damping",
-        )
-    )
+    rubbing = friction = None
+    if rubbed is not None:
+        level = float(rubbed.values[7])
+        rubbing = of(level, [0.0] * 7 + [1.0])
+        if mass is not None:
+            scale = mass.value
+            friction = of(level * scale, [0.0, 0.0, 0.0, -level * scale / gain, 0, 0, 0, scale])
+        else:
+            unknown.append(("friction", "known over the mass only, see mass"))
+    else:
+        why = "what the model leaves asks for no friction; let it ring freely to see less of it"
+        if doubtful:
+            why = f"what the model leaves may be friction; {doubtful}"
+        unknown.append(("friction", why))
     noise = _difference_noise(full.residuals)
     left = math.sqrt(full.cost / count)
     rest = None
@@ -2099,7 +2280,7 @@ def _driven_identification(
         )
     seen = of(damping, [0.0, 1.0])
     complaints = [str(complaint) for complaint in log.complaints]
-    complaints += _driven_doubts(log, source, per_unit, rows, left, noise, white, fit)
+    complaints += _driven_doubts(log, source, per_unit, rows, left, noise, white, full)
     first_s = float(log.index[rows[0]]) * log.period_s
     return Identification(
         kind="response",
@@ -2111,9 +2292,12 @@ def _driven_identification(
         stiffness=spring,
         delay_s=None if "delay_s" in dict(unknown) else late,
         unknown=tuple(unknown),
-        damping_kinds=("viscous",) if seen.low > 0.0 else (),
-        undecided=("coulomb", "quadratic"),
+        friction=friction,
+        damping_kinds=(("viscous",) if seen.low > 0.0 else ())
+        + (("coulomb",) if rubbed is not None else ()),
+        undecided=("quadratic",) if rubbed is not None else ("coulomb", "quadratic"),
         decay_rate_per_s=of(0.5 * damping, [0.0, 0.5]),
+        friction_acceleration=rubbing,
         gain=of(per_unit, [0.0, 0.0, 0.0, 1.0 / swing], positive=False),
         input_name=source.name,
         input_unit=source.unit,
@@ -2127,6 +2311,26 @@ def _driven_identification(
         samples=log.samples,
         complaints=tuple(complaints),
     )
+
+
+def _friction_asked_for(model: _Driven, linear: Fit) -> tuple[Fit | None, str]:
+    """The fit with friction where the linear one leaves more than noise; why not, where it does."""
+    count = model.position.size
+    noise = _difference_noise(linear.residuals)
+    _, white = _covariance(linear, range(7))
+    if white or linear.cost < 1.1 * noise**2 * count:
+        return None, ""
+    if count > MOST_WITH_FRICTION:
+        return None, (
+            f"it is looked for in at most {MOST_WITH_FRICTION} samples without a gap; cut the log"
+        )
+    rubbed = _rubbing_fit(model, linear, noise)
+    if rubbed is None:
+        return None, "no fit with it settles; let it ring freely"
+    better = _criterion(linear.cost, count, 7) - _criterion(rubbed.cost, count, 8)
+    if better < CLEAR:
+        return None, "but it explains no better; let it ring freely"
+    return rubbed, ""
 
 
 def _driven_doubts(
