@@ -157,7 +157,8 @@ def _words_of(
             continue
         size = abs(t.coefficient)
         most = sum_frac - formats[t.signal].frac_bits
-        fit = math.floor(math.log2((top + 0.49) / size)) if size > 0.0 else most
+        fit = math.floor(math.log2(top + 0.49) - math.log2(size)) if size > 0.0 else most
+        fit = min(fit, most)
         while size > 0.0 and abs(round(t.coefficient * 2.0**fit)) > top:
             fit -= 1
         n = min(most, fit)
@@ -394,8 +395,18 @@ def words_of(task: Task, gains: Gains, word_bits: int) -> Words:
     most bits for each word (own derivation; the bound is the interval bound of
     `equations.partial_sum_range`).
     """
+    if min(gains.kp, gains.kd, gains.ki) < 0.0:
+        raise no_design("a negative gain is not turned into words")
     equations = controller_equations(task, gains, word_bits)
     builder = _Builder(equations, word_bits)
+    for e in equations.update:
+        f = builder.formats.get(e.name)
+        if e.settles == "output" and e.spare_bits and f is not None and f.limit is not None:
+            if task.loop.actuator.limit_code << f.frac_bits > f.limit[1]:
+                raise no_design(
+                    f"{e.name}: the output's range leaves no room for a notch in {word_bits}-bit "
+                    "words; use word = 32, or an actuator of fewer bits"
+                )
     # Differences that are read before they are made need their format first.
     for e in equations.update:
         if e.name not in builder.formats and not e.wide:

@@ -210,6 +210,24 @@ def test_small_gain_is_told_not_lost() -> None:
         words_of(task, replace(gains, ki=gains.ki * 1e-7), 16)
 
 
+def test_a_notch_needs_room_above_the_output() -> None:
+    """16-bit codes fill a 16-bit word: differences of them do not fit, and the error says so."""
+    base = reference_loop("actuator.bits=16")
+    task = task_of(replace(base, aim=replace(base.aim, notches=(NOTCH,))))
+    gains = built("notch", 32)[1]
+    with pytest.raises(DesignError, match="use word = 32"):
+        words_of(task, gains, 16)
+    assert words_of(task, gains, 32).controller.word_bits == 32
+
+
+def test_gains_that_are_no_gains() -> None:
+    task, gains, _ = built("pid", 32)
+    with pytest.raises(DesignError, match="negative"):
+        words_of(task, replace(gains, kd=-1.0), 32)
+    with pytest.raises(DesignError, match="kr"):
+        words_of(task, replace(gains, beta=2e-308), 32)
+
+
 def test_words_are_the_nearest() -> None:
     words = built("pd", 32)[2]
     for e in words.errors:

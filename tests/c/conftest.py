@@ -166,9 +166,12 @@ def machine(
     def build(controller: WordController) -> Machine:
         name = controller.name
         library = tmp_path_factory.mktemp("library") / f"{name}.so"
+        # Anything undefined stops the process at once: no answer is compared that C does not give.
+        trap = "-fsanitize-undefined-trap-on-error" if any_cc == "gcc" else "-fsanitize-trap=all"
         run(
             [
-                any_cc, "-std=c99", "-O2", "-shared", "-fPIC", f"-DNAME={name}",
+                any_cc, "-std=c99", "-O2", "-fsanitize=undefined", trap, "-shared", "-fPIC",
+                f"-DNAME={name}",
                 f'-DHEADER="{name}.h"', "-I", emitted, "-o", library,
                 emitted / f"{name}.c", HERE / "batch.c",
             ]
