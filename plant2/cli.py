@@ -263,6 +263,39 @@ def emit(
         raise typer.Exit(0 if report.met else 1)
 
 
+@app.command()
+def identify(
+    log: Annotated[Path, typer.Argument(metavar="LOG", help="A CSV log with units in its header.")],
+    kind: Annotated[
+        str | None,
+        typer.Option("--kind", help="ring-down or response; seen from the data when not given."),
+    ] = None,
+    for_loop: Annotated[
+        Path | None,
+        typer.Option("--for", metavar="LOOP", help="Loop file for scales and plausibility."),
+    ] = None,
+    rate: Annotated[
+        str | None,
+        typer.Option("--rate", metavar="RATE", help="Sample rate of a log without a time column."),
+    ] = None,
+    to_json: JsonOption = None,
+) -> None:
+    """Plant parameters from a log, with 95 % intervals and what the log cannot tell."""
+    with _complaints():
+        from plant2.identify import as_json, identification_text, identify_log
+        from plant2.logs import read_log
+        from plant2.quantity import KINDS, parse_quantity
+
+        described = None if for_loop is None else _load(for_loop, None)
+        rate_hz = None if rate is None else parse_quantity(rate, KINDS["frequency"], name="rate")
+        record = read_log(log, rate_hz=rate_hz, loop=described)
+        found = identify_log(record, None if kind is None else kind.replace("-", "_"), described)
+        console = _console(to_json)
+        for line in identification_text(found, described):
+            console.print(line, markup=False)
+        _write_json(as_json(found), to_json)
+
+
 def main() -> None:
     """Entry point of the ``plant2`` command.
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import os
 import re
 import stat
@@ -299,6 +300,26 @@ def test_a_home_that_cannot_be_written_changes_nothing(tmp_path: Path) -> None:
         )  # fmt: skip
         assert done.stdout == usual.stdout
     assert not list(locked.iterdir())
+
+
+def test_identify_reads_a_free_decay(tmp_path: Path) -> None:
+    """Simulated: 35.6 Hz, damping ratio 0.02, no noise; a free decay knows no mass."""
+    log, target = tmp_path / "decay.csv", tmp_path / "out.json"
+    rows = ["time [s], position [um]"]
+    for k in range(4000):
+        t = k * 5e-4
+        swing = math.exp(-0.02 * 223.68 * t) * math.cos(223.68 * math.sqrt(1 - 4e-4) * t)
+        rows.append(f"{t:.4f}, {1000 * swing:.3f}")
+    log.write_text("\n".join(rows) + "\n", encoding="utf-8")
+    done = run("identify", str(log), "--json", str(target))
+    assert done.exit_code == 0
+    data = json.loads(target.read_text())
+    assert data["natural_frequency_hz"]["value"] == pytest.approx(223.68 / 2 / math.pi, rel=1e-5)
+    assert data["damping_ratio"]["value"] == pytest.approx(0.02, rel=1e-3)
+    assert data["mass_kg"] is None and "mass_kg" in data["unknown"]
+    log.write_text("time [s], position [um]\n0, 5\n1, 5\n", encoding="utf-8")
+    assert run("identify", str(log)).exit_code == 2
+    assert run("identify", str(log), "--rate", "fast").exit_code == 2
 
 
 # --- loop files written by someone in a hurry -----------------------------------------------------
