@@ -2,7 +2,8 @@
 
 `expected.json` beside each loop file holds the figures of the check as they were when the example
 was last renewed (`PLANT2_RENEW_EXAMPLES=1 make test PYTEST_ARGS="tests/test_examples.py"`).
-Integers must agree exactly, other numbers to 1e-6: they come out of a floating-point library.
+Integers must agree exactly, up to what a sum-wide bound owes to the last digit of a double; other
+numbers to 1e-6: they come out of a floating-point library.
 """
 
 from __future__ import annotations
@@ -47,6 +48,8 @@ def same(found: Any, kept: Any, where: str) -> None:
         assert len(found) == len(kept), where
         for i, (a, b) in enumerate(zip(found, kept, strict=True)):
             same(a, b, f"{where}[{i}]")
+    elif isinstance(kept, int) and abs(kept) > 2**40:
+        assert found == pytest.approx(kept, rel=1e-13), where
     elif isinstance(kept, float):
         assert found == pytest.approx(kept, rel=1e-6, abs=1e-12), where
     else:

@@ -127,11 +127,12 @@ HOSTILE += ["(" * 10**5, "5 m" + "**9" * 10**5, "5 " + "mA" * 19, "1" + " " * 10
 
 
 @pytest.mark.parametrize("text", HOSTILE, ids=range(len(HOSTILE)))
-def test_hostile_text_costs_no_time(text: str) -> None:
+def test_hostile_text_does_not_run_away(text: str) -> None:
     parse_quantity("1 m", KINDS["length"])  # pint is loaded before the clock runs
-    start = time.perf_counter()
+    start = time.process_time()
     error = refusal(text, "length")
-    assert time.perf_counter() - start < 1.0
+    # a pattern that runs away takes minutes; this is no measure of speed
+    assert time.process_time() - start < 10.0
     assert len(str(error)) < 400
 
 
