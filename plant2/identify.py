@@ -61,6 +61,7 @@ _SIZE_NODES = 16
 _STRETCH = 1.15
 _LOOKED_AT = 65_536
 _SEARCHED = 20_000
+_BLIND = 1e-12
 
 
 class IdentificationError(Plant2Error):
@@ -756,14 +757,19 @@ def _covariance(fit: Fit, free: Sequence[int]) -> tuple[Real, bool]:
     """Covariance of the parameters from the residuals, and whether these are alike noise.
 
     Where neighbours go together, sums over stretches of the record take the place of single
-    residuals, which leaves their correlation in.
+    residuals, which leaves their correlation in. Numbers that the data tell only together with
+    others have an infinite variance.
     """
     slopes, residuals = fit.jacobian[:, free], fit.residuals
     count, parameters = slopes.shape
     norms = np.sqrt(np.einsum("ij,ij->j", slopes, slopes))
     norms = np.where(norms > 0.0, norms, 1.0)
     scaled = slopes / norms
-    inverse = np.linalg.pinv(scaled.T @ scaled, rcond=1e-14)
+    strengths, directions = np.linalg.eigh(scaled.T @ scaled)
+    blind = strengths < _BLIND * strengths[-1]
+    strengths = np.where(blind, np.inf, strengths)
+    inverse = (directions / strengths) @ directions.T
+    untold = (np.abs(directions[:, blind]) > 1e-3).any(axis=1)
     freedom = max(count - parameters, 1)
     variance = float(residuals @ residuals) / freedom
     inner = variance * inverse
@@ -783,7 +789,9 @@ def _covariance(fit: Fit, free: Sequence[int]) -> tuple[Real, bool]:
         quantile = _quantile(stretches - 1)
     inner = inner * (quantile / _Z95) ** 2
     full = np.zeros((fit.values.size, fit.values.size))
-    full[np.ix_(free, free)] = inner / np.outer(norms, norms)
+    inner = inner / np.outer(norms, norms)
+    inner[untold, untold] = np.inf
+    full[np.ix_(free, free)] = inner
     return full, white
 
 
@@ -1877,12 +1885,15 @@ def _filtered_guesses(model: _Driven) -> list[Real]:
 # Motion under a measured input, with friction
 
 
-def _rubbing_motion(p: Real, drive: Real, period_s: float) -> Real:
-    """Sampled position with Coulomb friction, exact between the events.
+def _rubbing_motion(
+    p: Real, drive: Real, period_s: float, begin: int = 0, stood: bool = False
+) -> Real:
+    """Sampled position with Coulomb friction from a sample on, exact between the events.
 
     Values are stiffness and damping over mass, delay, gain, first position, first speed, constant
     acceleration, friction over mass. Between two reversals friction is a constant force; where the
-    mass stands it stays as long as spring and drive stay within the friction.
+    mass stands it stays as long as spring and drive stay within the friction; a mass that stood at
+    first stays in any case until the drive changes.
     """
     square, rate, delay, gain, x, v, bias, friction = (float(value) for value in p)
     whole, fraction = split_delay(delay, period_s)
@@ -1896,13 +1907,15 @@ def _rubbing_motion(p: Real, drive: Real, period_s: float) -> Real:
         for span, transition, push in zip(spans.tolist(), psi, effect, strict=True)
     ]
     out = []
-    for k in range(drive.size):
+    held = pulls[begin]
+    for k in range(begin, drive.size):
         out.append(x)
         older = pulls[k - whole - 1] if k > whole else first
         newer = pulls[k - whole] if k >= whole else first
         for (span, xx, xv, vx, vv, gx, gv), pull in zip(parts, (older, newer), strict=True):
-            if span == 0.0:
+            if span == 0.0 or (stood and pull == held):
                 continue
+            stood = False
             if v == 0.0:
                 net = pull - square * x
                 if -friction <= net <= friction:
@@ -1918,7 +1931,7 @@ def _rubbing_motion(p: Real, drive: Real, period_s: float) -> Real:
             else:
                 x, v = x + xx * x + xv * v + gx * acting, after
         if not abs(x) < 1e12:
-            return np.full(drive.size, np.inf)
+            return np.full(drive.size - begin, np.inf)
     return np.array(out)
 
 
@@ -1975,11 +1988,35 @@ def _way_after(v: float, push: float, square: float, rate: float, t: float) -> f
     return t * sum(w * _speed_after(v, push, square, rate, u * t) for u, w in _GAUSS)
 
 
-def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> Fit | None:
-    """Fit eight numbers with friction, from several first guesses of it; None where none settles.
+def _moving_stretch(model: _Driven, omega: float, noise: float) -> tuple[int, int, bool]:
+    """The longest motion without a stand in it, with the stand before it and one cycle less.
 
-    A single first guess gets stuck: the places where the mass stands make the sum of squares
-    ragged.
+    Also tells whether the stretch begins with a stand.
+
+    Where the mass stands, friction is anything up to its level, and where it comes to stand jumps
+    with the parameters: what is behind a stand tells little and spoils the search.
+    """
+    count = model.position.size
+    cycle = max(4, round(2.0 * math.pi / (omega * model.period_s)))
+    width = min(max(8, cycle // 3), count // 4)
+    windows = np.lib.stride_tricks.sliding_window_view(model.position, width)
+    stands = np.ptp(windows, axis=1) < 7.0 * noise
+    edges = np.flatnonzero(np.diff(np.concatenate([[True], stands, [True]]).astype(int)))
+    starts, ends = edges[::2], edges[1::2]
+    if starts.size == 0:
+        return 0, count, bool(stands[0])
+    longest = int(np.argmax(ends - starts))
+    begin = 0 if longest == 0 else int(ends[longest - 1])
+    end = int(ends[longest])
+    if end >= windows.shape[0]:
+        return begin, count, bool(stands[begin])
+    return begin, max(end - cycle, int(starts[longest]) + 2 * cycle), bool(stands[begin])
+
+
+def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> tuple[Fit, tuple[int, int]] | None:
+    """Fit eight numbers with friction, from several first guesses; None where none settles.
+
+    Also returns the samples that were fitted.
     """
     period = model.period_s
     lags = sum(1.0 / -float(model.start.a[i, i]) for i in range(2, model.start.a.shape[0]))
@@ -1988,38 +2025,39 @@ def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> Fit | None:
     start[2] += lags
     rate = max(math.sqrt(float(start[0])), 1.0 / (period * model.position.size))
     reach = float(np.ptp(model.position))
-    drive = abs(float(start[3])) * float(np.ptp(model.drive))
+    force = abs(float(start[3])) * float(np.ptp(model.drive))
     scale = np.array(
-        [rate**2, rate, period, abs(float(start[3])), reach, reach * rate, reach * rate**2, drive]
+        [rate**2, rate, period, abs(float(start[3])), reach, reach * rate, reach * rate**2, force]
     )
     low = np.array([0.0, 0.0, 0.0, -np.inf, -np.inf, -np.inf, -np.inf, 0.0])
-    high = np.array([np.inf] * 7 + [2.0 * drive])
+    high = np.array([np.inf] * 7 + [2.0 * force])
     high[2] = (MOST_DELAY + 10) * period
+    begin, end, stood = _moving_stretch(model, rate, noise)
+    if end - begin < 60:
+        return None
+    if stood:
+        # From a stand there is no first speed; the other numbers are free.
+        start[4], start[5] = float(model.position[begin]), 0.0
+        low[5] = high[5] = 0.0
 
-    def residuals(p: Real) -> Real:
-        return _rubbing_motion(p, model.drive, period) - model.position
+    def search(guess: Real, end: int) -> Fit:
+        drive, position = model.drive[:end], model.position[begin:end]
 
-    def slopes(p: Real, left: Real) -> Real:
-        out = np.empty((left.size, 8))
-        for column in range(8):
-            step = 1e-6 * max(abs(float(p[column])), 1e-2 * float(scale[column]))
-            moved = p.copy()
-            moved[column] += step
-            out[:, column] = (residuals(moved) - left) / step
-        return out
+        def residuals(p: Real) -> Real:
+            return _rubbing_motion(p, drive, period, begin, stood) - position
 
-    ranked = []
-    for share in (0.003, 0.01, 0.03, 0.1, 0.25):
-        for damped in (1.0, 0.3):
-            guess = start.copy()
-            guess[1] *= damped
-            guess[7] = share * drive
-            left = residuals(guess)
-            ranked.append((float(left @ left), guess))
-    ranked.sort(key=lambda pair: pair[0])
-    best: Fit | None = None
-    for _, guess in ranked[:6]:
-        fit = least_squares(
+        def slopes(p: Real, left: Real) -> Real:
+            out = np.empty((left.size, 8))
+            for column in range(8):
+                step = 1e-6 * max(abs(float(p[column])), 1e-2 * float(scale[column]))
+                moved = p.copy()
+                moved[column] += step
+                out[:, column] = (residuals(moved) - left) / step
+            if stood:
+                out[:, 5] = 0.0
+            return out
+
+        return least_squares(
             residuals,
             guess,
             scale=scale,
@@ -2030,15 +2068,40 @@ def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> Fit | None:
             settled=1e-4,
             turns=40,
         )
-        if best is None or fit.cost < best.cost:
-            best = fit
-        if best.converged and best.cost < 1.2 * noise**2 * model.position.size:
+
+    ranked = []
+    for share in (0.003, 0.01, 0.03, 0.1, 0.25):
+        for damped in (1.0, 0.3):
+            guess = start.copy()
+            guess[1] *= damped
+            guess[7] = share * force
+            left = _rubbing_motion(guess, model.drive[:end], period, begin, stood)
+            left = left - model.position[begin:end]
+            ranked.append((float(left @ left), guess))
+    ranked.sort(key=lambda pair: pair[0])
+    best: Fit | None = None
+    for _, guess in ranked[:6]:
+        fit = search(guess, end)
+        best = fit if best is None or fit.cost < best.cost else best
+        if best.converged and best.cost < 1.2 * noise**2 * best.residuals.size:
             break
-    if best is None or not best.converged:
+    if best is None:
+        return None
+    # The last swings before a stand are ragged, too.
+    dead = float(best.values[7]) / max(float(best.values[0]), 1e-300)
+    cycle = max(4, round(2.0 * math.pi / (rate * period)))
+    if end < model.position.size and dead > 0.0 and end - begin > 3 * cycle:
+        windows = np.lib.stride_tricks.sliding_window_view(model.position[begin:end], cycle)
+        wide = np.flatnonzero(np.ptp(windows, axis=1) > 5.0 * dead)
+        shorter = begin + int(wide[-1]) + cycle if wide.size else end
+        if begin + 60 < shorter < end:
+            end = shorter
+            best = search(best.values, end)
+    if not (best.converged and best.cost < 1.3 * noise**2 * best.residuals.size):
         return None
     values = best.values.copy()
     values[2] = max(values[2] - lags, 0.0)
-    return replace(best, values=values)
+    return replace(best, values=values), (begin, end)
 
 
 def _response(log: Log, loop: Loop | None, source: _Input) -> Identification:
@@ -2187,7 +2250,9 @@ def _driven_identification(
     """Turn a fitted model into quantities with intervals, and say what is missing."""
     count = model.position.size
     turn = 2.0 * math.pi
-    rubbed, doubtful = _friction_asked_for(model, full)
+    rubbed, part, doubtful = _friction_asked_for(model, full)
+    origin = rows[0]
+    used = (origin + part[0], origin + part[1])
 
     # Without the drive the free motion alone must explain clearly less.
     undriven = _projected(model.columns(*full.values[:3])[:, 1:], model.position)
@@ -2206,9 +2271,13 @@ def _driven_identification(
     stiffness, damping, delay, gain = (float(v) for v in full.values[:4])
 
     def of(value: float, gradient: Sequence[float], *, positive: bool = True) -> Estimate:
-        slope = np.zeros(full.values.size)
-        slope[: len(gradient)] = gradient
-        return _estimate(value, float(slope @ covariance @ slope), positive=positive)
+        slope = np.array(gradient, dtype=np.float64)
+        told = np.flatnonzero(slope)
+        inner = covariance[np.ix_(told, told)]
+        variance = math.inf
+        if np.isfinite(np.diag(inner)).all():
+            variance = float(slope[told] @ inner @ slope[told])
+        return _estimate(value, variance, positive=positive)
 
     unknown: list[tuple[str, str]] = []
     square = of(stiffness, [1.0], positive=False)
@@ -2234,17 +2303,20 @@ def _driven_identification(
     else:
         scale = abs(source.force_per_unit / per_unit)
         relative = _Z95 * math.sqrt(max(float(covariance[3, 3]), 0.0)) / abs(gain)
-        if relative < 0.5:
+        if relative < 0.5:  # infinite where only a sum with the standing force is told
             mass = Estimate(
                 value=scale, low=scale / (1.0 + relative), high=scale / (1.0 - relative)
             )
             viscous = of(damping * scale, [0.0, scale, 0.0, -damping * scale / gain])
             spring = of(stiffness * scale, [scale, 0.0, 0.0, -stiffness * scale / gain])
         else:
-            why = f"the {source.name} moved the mass too little, and the friction or spring instead"
+            why = (
+                f"the log does not tell it from a standing force or friction; let the "
+                f"{source.name} change often, in both directions"
+            )
             unknown += [("mass", why), ("damping", why), ("stiffness", why)]
     late = of(delay, [0.0, 0.0, 1.0])
-    if late.high - late.low > 20.0 * log.period_s:
+    if not late.high - late.low <= 20.0 * log.period_s:
         unknown.append(("delay_s", f"the {source.name} changes too slowly to tell it"))
     rubbing = friction = None
     if rubbed is not None:
@@ -2261,17 +2333,17 @@ def _driven_identification(
             why = f"what the model leaves may be friction; {doubtful}"
         unknown.append(("friction", why))
     noise = _difference_noise(full.residuals)
-    left = math.sqrt(full.cost / count)
+    left = math.sqrt(full.cost / full.residuals.size)
     rest = None
     if sprung:
-        away = float(full.values[6]) - gain * float(source.values[rows[0]]) / swing
+        away = float(full.values[6]) - gain * float(source.values[origin]) / swing
         rest = of(
-            float(log.position[rows[0]]) + away / stiffness,
+            float(log.position[origin]) + away / stiffness,
             [
                 -away / stiffness**2,
                 0.0,
                 0.0,
-                -float(source.values[rows[0]]) / swing / stiffness,
+                -float(source.values[origin]) / swing / stiffness,
                 0.0,
                 0.0,
                 1.0 / stiffness,
@@ -2281,7 +2353,6 @@ def _driven_identification(
     seen = of(damping, [0.0, 1.0])
     complaints = [str(complaint) for complaint in log.complaints]
     complaints += _driven_doubts(log, source, per_unit, rows, left, noise, white, full)
-    first_s = float(log.index[rows[0]]) * log.period_s
     return Identification(
         kind="response",
         position_unit=log.position_unit,
@@ -2296,15 +2367,15 @@ def _driven_identification(
         damping_kinds=(("viscous",) if seen.low > 0.0 else ())
         + (("coulomb",) if rubbed is not None else ()),
         undecided=("quadratic",) if rubbed is not None else ("coulomb", "quadratic"),
-        decay_rate_per_s=of(0.5 * damping, [0.0, 0.5]),
-        friction_acceleration=rubbing,
-        gain=of(per_unit, [0.0, 0.0, 0.0, 1.0 / swing], positive=False),
+        decay_rate_per_s=_if_told(of(0.5 * damping, [0.0, 0.5])),
+        friction_acceleration=None if rubbing is None else _if_told(rubbing),
+        gain=_if_told(of(per_unit, [0.0, 0.0, 0.0, 1.0 / swing], positive=False)),
         input_name=source.name,
         input_unit=source.unit,
-        offset=rest,
-        first_s=first_s,
-        last_s=first_s + (count - 1) * log.period_s,
-        cycles=0.0 if frequency is None else frequency.value * count * log.period_s,
+        offset=None if rest is None else _if_told(rest),
+        first_s=float(log.index[used[0]]) * log.period_s,
+        last_s=float(log.index[used[1] - 1]) * log.period_s,
+        cycles=0.0 if frequency is None else frequency.value * (used[1] - used[0]) * log.period_s,
         residual_rms=left,
         noise_rms=noise,
         rate_hz=log.rate_hz,
@@ -2313,24 +2384,30 @@ def _driven_identification(
     )
 
 
-def _friction_asked_for(model: _Driven, linear: Fit) -> tuple[Fit | None, str]:
-    """The fit with friction where the linear one leaves more than noise; why not, where it does."""
+def _if_told(estimate: Estimate) -> Estimate | None:
+    return estimate if math.isfinite(estimate.high) else None
+
+
+def _friction_asked_for(model: _Driven, linear: Fit) -> tuple[Fit | None, tuple[int, int], str]:
+    """The fit with friction, if the linear one leaves more than noise; why not, where it does."""
     count = model.position.size
     noise = _difference_noise(linear.residuals)
     _, white = _covariance(linear, range(7))
     if white or linear.cost < 1.1 * noise**2 * count:
-        return None, ""
+        return None, (0, count), ""
     if count > MOST_WITH_FRICTION:
-        return None, (
-            f"it is looked for in at most {MOST_WITH_FRICTION} samples without a gap; cut the log"
-        )
-    rubbed = _rubbing_fit(model, linear, noise)
-    if rubbed is None:
-        return None, "no fit with it settles; let it ring freely"
-    better = _criterion(linear.cost, count, 7) - _criterion(rubbed.cost, count, 8)
-    if better < CLEAR:
-        return None, "but it explains no better; let it ring freely"
-    return rubbed, ""
+        why = f"it is looked for in at most {MOST_WITH_FRICTION} samples without a gap; cut the log"
+        return None, (0, count), why
+    found = _rubbing_fit(model, linear, noise)
+    if found is None:
+        return None, (0, count), "no fit with it settles; let it ring freely"
+    fit, (begin, end) = found
+    part = replace(model, drive=model.drive[begin:end], position=model.position[begin:end])
+    plain = _three_number_fit(part, linear.values[:3])
+    gain = _criterion(plain.cost, end - begin, 7) - _criterion(fit.cost, end - begin, 8)
+    if gain < CLEAR:
+        return None, (0, count), "but it explains no better; let it ring freely"
+    return fit, (begin, end), ""
 
 
 def _driven_doubts(
