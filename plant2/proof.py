@@ -49,10 +49,10 @@ from plant2.errors import Plant2Error
 INT_BITS = (16, 32)
 """Widths of ``int`` that the text is proven for. [bit]"""
 
-STEPS = (("QF_LIA", 200_000), ("QF_BV", 4_000_000))
-"""Ways to an answer, linear arithmetic and then words of bits, and what each may spend, in the
-solver's own count of steps, so that the answer does not depend on the machine. Text as it is
-emitted takes a few thousand of the first."""
+STEPS = (("QF_LIA", 200_000), ("QF_BV", 4_000_000), ("QF_LIA", 3_000_000))
+"""Ways to an answer, linear arithmetic and words of bits, and what each may spend, in the solver's
+own count of steps, so that the answer does not depend on the machine. Text as it is emitted takes a
+few thousand of the first."""
 
 SECONDS_LIMIT = 20
 """A second fence, for steps that take uncommonly long. [s]"""
@@ -1318,7 +1318,7 @@ class _Solver:
         return self.number(value) if isinstance(value, int) else value
 
     def differ(
-        self, a: Any, b: Any, *, exactly: bool = False
+        self, a: Any, b: Any, *, exactly: bool = False, patiently: bool = False
     ) -> tuple[bool | None, Callable[[Any], int] | None]:
         """Whether two terms can differ, and the unknowns where they do; None when it stays open.
 
@@ -1331,7 +1331,7 @@ class _Solver:
             return False, None
         known = [*self.bounds, *(self.definitions if exactly else ())]
         bits = _Bits(z3, self.context, self.spans)
-        for theory, steps in STEPS:
+        for theory, steps in STEPS if patiently else STEPS[:-1]:
             solver = z3.SolverFor(theory, ctx=self.context)
             solver.set("rlimit", steps)
             solver.set("timeout", 1000 * SECONDS_LIMIT)
@@ -1522,9 +1522,10 @@ def _equal(controller: WordController, program: _Program, task: _Task, solver: _
     for what in words:
         subject = "the returned value" if what == "returned" else f"state word {what}"
         statement = f"{subject} is what the words give"
-        differs, values = solver.differ(text[what], words[what])
-        if differs is not False and solver.definitions:
-            differs, values = solver.differ(text[what], words[what], exactly=True)
+        named = bool(solver.definitions)
+        differs, values = solver.differ(text[what], words[what], patiently=not named)
+        if differs is not False and named:
+            differs, values = solver.differ(text[what], words[what], exactly=True, patiently=True)
         proven = None if differs is None else not differs
         found.append(Obligation(name=task.function, what=statement, proven=proven))
         if values is not None:
