@@ -14,7 +14,7 @@ Rules of this file:
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
 from typing import Any
@@ -1378,11 +1378,8 @@ def _by_swings(
     else:
         model = _closed_swings(np.asarray(rows * period), *values[:5]) + values[6]
     other = _other_line(raw - model, period, float(chosen.values[2]))
+    noise = _difference_noise(raw - model)
     left = (raw - model)[np.isfinite(raw)]
-    if blocks is not None:
-        noise = math.sqrt(float(np.median(blocks.variances)))
-    else:
-        noise = _difference_noise(left)
     return _Found(
         omega=float(chosen.values[2]),
         omega_variance=float(variances[2]),
@@ -1885,53 +1882,86 @@ def _filtered_guesses(model: _Driven) -> list[Real]:
 # Motion under a measured input, with friction
 
 
-def _rubbing_motion(
-    p: Real, drive: Real, period_s: float, begin: int = 0, stood: bool = False
-) -> Real:
-    """Sampled position with Coulomb friction from a sample on, exact between the events.
+def _rubbing_motion(p: Real, model: _Driven, rows: tuple[int, int], stood: bool = False) -> Real:
+    """Measured position with Coulomb friction in some rows, exact between the events.
 
     Values are stiffness and damping over mass, delay, gain, first position, first speed, constant
     acceleration, friction over mass. Between two reversals friction is a constant force; where the
     mass stands it stays as long as spring and drive stay within the friction; a mass that stood at
-    first stays in any case until the drive changes.
+    first stays in any case until the drive changes. A lag of the drive and of the sensor are exact
+    but where the speed changes sign: there the lagging drive counts with its mean, and the sensor
+    sees a straight way.
     """
     square, rate, delay, gain, x, v, bias, friction = (float(value) for value in p)
-    whole, fraction = split_delay(delay, period_s)
-    plain = state_space(Plant(mass=1.0, damping=rate, stiffness=square))
-    spans = np.array([fraction * period_s, (1.0 - fraction) * period_s])
-    psi, effect, _ = propagate(plain, spans)
-    pulls = (gain * drive + bias).tolist()
-    first = pulls[0]
-    parts = [
-        (span, *transition.ravel().tolist(), *push.tolist())
-        for span, transition, push in zip(spans.tolist(), psi, effect, strict=True)
-    ]
-    out = []
-    held = pulls[begin]
-    for k in range(begin, drive.size):
-        out.append(x)
-        older = pulls[k - whole - 1] if k > whole else first
-        newer = pulls[k - whole] if k >= whole else first
-        for (span, xx, xv, vx, vv, gx, gv), pull in zip(parts, (older, newer), strict=True):
+    begin, end = rows
+    period = model.period_s
+    whole, fraction = split_delay(delay, period)
+    a = model.start.a.copy()
+    a[1, 0], a[1, 1] = -square, -rate
+    names = model.start.names
+    lag_at = names.index("force") if "force" in names else 0
+    eye_at = names.index("filtered position") if "filtered position" in names else 0
+    lag = -float(a[lag_at, lag_at]) if lag_at else 0.0
+    eye = -float(a[eye_at, eye_at]) if eye_at else 0.0
+
+    spans = [fraction * period, (1.0 - fraction) * period]
+    psi, _, push = propagate(replace(model.start, a=a), np.array(spans))
+    parts = []
+    for number, span in enumerate(spans):
+        rows_of = []
+        for at in (0, 1, eye_at):
+            lagging = float(psi[number, at, lag_at]) if lag_at else 0.0
+            seen = float(psi[number, at, eye_at]) if eye_at else 0.0
+            first, second = psi[number, at, 0], psi[number, at, 1]
+            rows_of.append((float(first), float(second), float(push[number, at]), lagging, seen))
+        mean = -math.expm1(-lag * span) / (lag * span) if lag * span > 0.0 else 0.0
+        parts.append((span, rows_of, math.exp(-lag * span), mean, math.exp(-eye * span)))
+
+    # The drive's pull as far as rows need it, and what the delay reaches back to.
+    back = max(0, begin - whole - 1)
+    pulls = (gain * model.drive[back:end] + bias).tolist()
+    behind, out = 0.0, []
+    seen = x
+    held = pulls[max(begin - whole, 0) - back]
+    last = held
+    for k in range(begin - back, end - back):
+        out.append(seen)
+        older, newer = pulls[max(k - whole - 1, 0)], pulls[max(k - whole, 0)]
+        for (span, rows_of, keep, mean, blur), pull in zip(parts, (older, newer), strict=True):
             if span == 0.0 or (stood and pull == held):
                 continue
             stood = False
+            if lag_at:
+                behind += last - pull
+            last = pull
+            force = pull + mean * behind
             if v == 0.0:
-                net = pull - square * x
+                net = force - square * x
                 if -friction <= net <= friction:
+                    behind *= keep
+                    seen = x + (seen - x) * blur if eye_at else x
                     continue
-                acting = pull - math.copysign(friction, net)
                 side = net
             else:
-                acting = pull - math.copysign(friction, v)
                 side = v
-            after = v + vx * x + vv * v + gv * acting
+            acting = pull - math.copysign(friction, side)
+            (xx, xv, xg, xq, _), (vx, vv, vg, vq, _), (yx, yv, yg, yq, yy) = rows_of
+            after = v + vx * x + vv * v + vg * acting + vq * behind
             if after * side < 0.0:
-                x, v = _through_turns(x, v, square, rate, pull, friction, span)
+                old = x
+                x, v = _through_turns(x, v, square, rate, force, friction, span)
+                if eye_at:
+                    slope = (x - old) / (eye * span)
+                    seen = x - slope + (seen - old + slope) * blur
             else:
-                x, v = x + xx * x + xv * v + gx * acting, after
+                if eye_at:
+                    seen += yx * x + yv * v + yg * acting + yq * behind + yy * seen
+                x, v = x + xx * x + xv * v + xg * acting + xq * behind, after
+            behind *= keep
+            if not eye_at:
+                seen = x
         if not abs(x) < 1e12:
-            return np.full(drive.size - begin, np.inf)
+            return np.full(end - begin, np.inf)
     return np.array(out)
 
 
@@ -2010,7 +2040,8 @@ def _moving_stretch(model: _Driven, omega: float, noise: float) -> tuple[int, in
     end = int(ends[longest])
     if end >= windows.shape[0]:
         return begin, count, bool(stands[begin])
-    return begin, max(end - cycle, int(starts[longest]) + 2 * cycle), bool(stands[begin])
+    end = min(count, max(end - cycle, int(starts[longest]) + 2 * cycle))
+    return begin, end, bool(stands[begin])
 
 
 def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> tuple[Fit, tuple[int, int]] | None:
@@ -2019,10 +2050,7 @@ def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> tuple[Fit, tuple[
     Also returns the samples that were fitted.
     """
     period = model.period_s
-    lags = sum(1.0 / -float(model.start.a[i, i]) for i in range(2, model.start.a.shape[0]))
     start = np.concatenate([linear.values, [0.0]])
-    # Quick first-order lags of drive and sensor count as delay here, and are taken off again.
-    start[2] += lags
     rate = max(math.sqrt(float(start[0])), 1.0 / (period * model.position.size))
     reach = float(np.ptp(model.position))
     force = abs(float(start[3])) * float(np.ptp(model.drive))
@@ -2040,21 +2068,21 @@ def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> tuple[Fit, tuple[
         start[4], start[5] = float(model.position[begin]), 0.0
         low[5] = high[5] = 0.0
 
-    def search(guess: Real, end: int) -> Fit:
-        drive, position = model.drive[:end], model.position[begin:end]
+    def residuals_to(end: int) -> Callable[[Real], Real]:
+        return lambda p: _rubbing_motion(p, model, (begin, end), stood) - model.position[begin:end]
 
-        def residuals(p: Real) -> Real:
-            return _rubbing_motion(p, drive, period, begin, stood) - position
+    def search(guess: Real, end: int) -> Fit:
+        residuals = residuals_to(end)
 
         def slopes(p: Real, left: Real) -> Real:
-            out = np.empty((left.size, 8))
+            out = np.zeros((left.size, 8))
             for column in range(8):
+                if column == 5 and stood:
+                    continue
                 step = 1e-6 * max(abs(float(p[column])), 1e-2 * float(scale[column]))
                 moved = p.copy()
                 moved[column] += step
                 out[:, column] = (residuals(moved) - left) / step
-            if stood:
-                out[:, 5] = 0.0
             return out
 
         return least_squares(
@@ -2075,8 +2103,7 @@ def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> tuple[Fit, tuple[
             guess = start.copy()
             guess[1] *= damped
             guess[7] = share * force
-            left = _rubbing_motion(guess, model.drive[:end], period, begin, stood)
-            left = left - model.position[begin:end]
+            left = residuals_to(end)(guess)
             ranked.append((float(left @ left), guess))
     ranked.sort(key=lambda pair: pair[0])
     best: Fit | None = None
@@ -2099,9 +2126,7 @@ def _rubbing_fit(model: _Driven, linear: Fit, noise: float) -> tuple[Fit, tuple[
             best = search(best.values, end)
     if not (best.converged and best.cost < 1.3 * noise**2 * best.residuals.size):
         return None
-    values = best.values.copy()
-    values[2] = max(values[2] - lags, 0.0)
-    return replace(best, values=values), (begin, end)
+    return best, (begin, end)
 
 
 def _response(log: Log, loop: Loop | None, source: _Input) -> Identification:

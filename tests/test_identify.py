@@ -16,6 +16,7 @@ import pickle
 import re
 from dataclasses import replace
 from functools import lru_cache
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -34,7 +35,8 @@ from plant2.identify import (
     mass_of_two_decays,
     turning_points,
 )
-from plant2.logs import Log, log_from_text, log_of_samples
+from plant2.logs import Log, log_from_text, log_of_samples, read_log
+from plant2.loopfile import load_loop
 from plant2.plant import damping_ratio_of_log_decrement, log_decrement_of_amplitudes
 
 W0 = 2.0 * math.pi * 10.0658
@@ -1152,3 +1154,44 @@ def test_text_of_a_driven_log() -> None:
     assert re.search(r"^mass +(49\.9|50\.0)\d* g ", text, re.M)
     assert re.search(r"^delay +1\.3[45]\d* ms ", text, re.M)
     assert re.search(r"^gain of the force +(19\.9|20\.0)\d* m/s\^2 per N", text, re.M)
+
+
+# --------------------------------------------------------------------------------------------------
+# The example logs
+
+
+def test_example_of_a_free_decay(root: Path) -> None:
+    """62 g, 1.1 N s/m, 3.1 N/mm, 10 mN; let go at 51.2 ms; three and one samples missing."""
+    found = identify_log(read_log(root / "examples" / "logs" / "let_go.csv"))
+    step = 1e-3 / 32768.0
+    check_within(found.natural_frequency_hz, math.sqrt(3100.0 / 0.062) / (2.0 * math.pi))
+    check_within(found.decay_rate_per_s, 1.1 / 0.124)
+    check_within(found.friction_acceleration, 0.01 / 0.062 / step)
+    check_within(found.release_s, 0.0512)
+    check_within(found.offset, 12e-6 / step)
+    assert found.damping_kinds == ("viscous", "coulomb")
+    assert [complaint.split(":")[0] for complaint in found.complaints] == [
+        "line 905",
+        "line 1504",
+        "line 1505",
+    ]
+
+
+def test_example_of_a_driven_motion(root: Path) -> None:
+    """The same stage with its loop file: friction beside the lag of the current loop."""
+    loop = load_loop(root / "examples" / "focus_stage" / "loop.toml")
+    found = identify_log(read_log(root / "examples" / "logs" / "shaken.csv"), loop=loop)
+    check_within(found.mass, 0.062)
+    check_within(found.damping, 1.1)
+    check_within(found.stiffness, 3100.0)
+    check_within(found.friction, 0.01)
+    check_within(found.delay_s, 21e-6)
+    check_within(found.offset, 12e-6)
+    assert found.complaints == () and found.unknown == ()
+    assert found.noise_rms == pytest.approx(math.hypot(25e-9, 1e-3 / 32768 / 12**0.5), rel=0.1)
+
+
+@pytest.mark.parametrize("name", ["let_go", "shaken"])
+def test_example_logs_say_that_they_are_simulated(root: Path, name: str) -> None:
+    text = (root / "examples" / "logs" / f"{name}.csv").read_text("utf-8")
+    assert text.startswith("Simulated, not measured: ")
