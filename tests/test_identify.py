@@ -38,6 +38,7 @@ from plant2.identify import (
 from plant2.logs import Log, log_from_text, log_of_samples, read_log
 from plant2.loopfile import load_loop
 from plant2.plant import damping_ratio_of_log_decrement, log_decrement_of_amplitudes
+from plant2.solve import least_squares
 
 W0 = 2.0 * math.pi * 10.0658
 """Natural frequency of the simulated plants. [rad/s]"""
@@ -1195,3 +1196,26 @@ def test_example_of_a_driven_motion(root: Path) -> None:
 def test_example_logs_say_that_they_are_simulated(root: Path, name: str) -> None:
     text = (root / "examples" / "logs" / f"{name}.csv").read_text("utf-8")
     assert text.startswith("Simulated, not measured: ")
+
+
+# --------------------------------------------------------------------------------------------------
+# The search behind all of it; its certified values are among the published cases
+
+
+def test_least_squares_stays_within_bounds_and_says_which_hold() -> None:
+    """Two straight lines in one: y = 3 x - 2 with the offset held at 0 or above."""
+    x = np.linspace(0.0, 1.0, 11)
+    fit = least_squares(
+        lambda p: p[0] * x + p[1] - (3.0 * x - 2.0), np.array([1.0, 1.0]), low=np.zeros(2)
+    )
+    # With the offset at 0 the slope is sum(x y)/sum(x^2) = (3 x 3.85 - 2 x 5.5)/3.85.
+    assert fit.values.tolist() == pytest.approx([3.0 - 11.0 / 3.85, 0.0], abs=1e-12)
+    assert fit.at_bound.tolist() == [False, True]
+    assert fit.converged
+
+
+def test_least_squares_steps_around_points_without_a_value() -> None:
+    fit = least_squares(
+        lambda p: np.array([np.inf]) if p[0] > 4.0 else p**2 - 9.0, np.array([0.5]), turns=200
+    )
+    assert fit.values.tolist() == pytest.approx([3.0], rel=1e-9)
