@@ -916,7 +916,7 @@ def test_intervals_of_the_driven_plant_hold_the_truth(kind: str) -> None:
 @pytest.mark.slow
 @pytest.mark.parametrize("kind", ["step", "sweep", "random"])
 def test_intervals_of_the_driven_plant_hold_the_truth_in_many_logs(kind: str) -> None:
-    check_coverage(driven_coverage(kind, range(1000, 1200)), 200)
+    check_coverage(driven_coverage(kind, range(1000, 1100)), 100)
 
 
 @pytest.mark.parametrize("damping", [0.0, 0.4])
