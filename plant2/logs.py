@@ -881,7 +881,7 @@ def _line(x: Real, y: Real) -> tuple[float, Real]:
     """Slope of the least-squares line and what is left of it."""
     mean_x, mean_y = float(x.mean()), float(y.mean())
     across, up = x - mean_x, y - mean_y
-    slope = float(across @ up) / float(across @ across)
+    slope = float(np.sum(across * up)) / float(np.sum(across * across))
     return slope, up - slope * across
 
 
