@@ -959,6 +959,8 @@ def _swing_fits(
                 place = _drag_swings(nodes, x0, t0, omega, alpha, friction, pull)
             else:
                 place = _closed_swings(nodes, x0, t0, omega, alpha, friction)
+            if not np.isfinite(place).all():
+                return np.full(times_s.size, np.inf)
             if group > 1:
                 left, middle, right = place.reshape(3, -1)
                 place = weight * (left + right) + (1.0 - 2.0 * weight) * middle
@@ -1209,6 +1211,13 @@ def _by_line(log: Log, decay: _Decay, step_rad: float) -> _Found | None:
     _refuse_growth(log, blocks)
     if blocks is not None and cycles >= AVERAGED_FROM_CYCLES:
         found = _by_blocks(decay, length, step_rad)
+        if found is not None and found.residual_rms > 1.2 * found.noise_rms:
+            # Blocks are long for a decay as quick as this in noise as low: the exact motion.
+            exact = None
+            if cycles <= 5.0 * AVERAGED_FROM_CYCLES:
+                exact = _by_swings(decay, length, step_rad, blocks)
+            if exact is not None and exact.residual_rms < found.residual_rms:
+                return exact
         if found is not None and decay.let_go is not None:
             # Only the first swings tell when it was let go.
             short = min(length, round(12.0 * 2.0 * math.pi / step_rad))

@@ -423,6 +423,20 @@ def test_few_and_many_cycles_agree_where_they_meet() -> None:
         assert other.high - other.low == pytest.approx(one.high - one.low, rel=0.5)
 
 
+@pytest.mark.parametrize(("ratio", "noise"), [(0.0082, 1e-8), (0.008, 2e-9)])
+def test_quick_decay_in_very_low_noise(ratio: float, noise: float) -> None:
+    """More than 150 cycles, but blocks too long for them: the exact motion takes over."""
+    log = held_and_let_go(
+        0.2, (ratio * W0, 0.0, 0.0), seed=3, noise=noise, samples=12_000, rate_hz=500.0
+    )
+    found = identify_log(log)
+    assert found.cycles > 150.0
+    assert found.damping_kinds == ("viscous",)
+    check_within(found.damping_ratio, ratio)
+    check_within(found.natural_frequency_hz, W0 / (2.0 * math.pi))
+    assert found.complaints == ()
+
+
 # --------------------------------------------------------------------------------------------------
 # Real logs are ugly
 

@@ -204,3 +204,31 @@ def test_rao_block_on_a_rough_surface() -> None:
     assert found.damping_kinds == ("coulomb",)
     assert found.friction_acceleration is not None
     assert found.friction_acceleration.value / 9.81 == pytest.approx(0.1132, abs=5e-5)
+
+
+def test_ogata_mass_spring_damper_from_a_step() -> None:
+    """K. Ogata, Modern Control Engineering, 5th ed., A-5-5, p. 236; statement read, m and b from
+    memory.
+
+    2 lbf move it to 0.1 ft with 0.0095 ft of overshoot at 2 s: 20 lbf/ft, 5.2 slug, 12.2 lbf s/ft.
+    Feet, pounds-force and slugs are as coherent as metres, newtons and kilograms.
+    """
+    depth = math.log(0.1 / 0.0095)
+    ratio = depth / math.hypot(math.pi, depth)
+    omega = math.pi / (2.0 * math.sqrt(1.0 - ratio**2))
+    t = np.arange(1500) / 100.0 - 3.0
+    damped = omega * math.sqrt(1.0 - ratio**2)
+    after = np.maximum(t, 0.0)
+    x = 0.1 - 0.1 * np.exp(-ratio * omega * after) * (
+        np.cos(damped * after) + ratio * omega / damped * np.sin(damped * after)
+    )
+    x += np.random.default_rng(3).normal(0.0, 1e-6, t.size)
+    force = np.where(t >= 0.0, 2.0, 0.0)
+    found = identify_log(log_of_samples(x, rate_hz=100.0, force=force))
+    assert found.mass is not None and found.damping is not None and found.stiffness is not None
+    assert found.stiffness.value == pytest.approx(20.0, abs=0.05)
+    assert found.mass.value == pytest.approx(5.2, abs=0.05)
+    assert found.damping.value == pytest.approx(12.2, abs=0.05)
+    assert found.damping_ratio is not None and found.natural_frequency_hz is not None
+    assert found.damping_ratio.value == pytest.approx(0.6, abs=0.005)
+    assert 2.0 * math.pi * found.natural_frequency_hz.value == pytest.approx(1.96, abs=0.005)
